@@ -1,0 +1,1 @@
+"""Solved state to numbers: solution, ledger, profiles, collection probability."""

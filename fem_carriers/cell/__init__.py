@@ -1,0 +1,1 @@
+"""What a person describes: base, surfaces, layers, contacts, patches, light, unit cell. Plain validated data."""

@@ -1,0 +1,52 @@
+"""A face of the cell: a surface with patches on it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from ..errors import Complaints
+from .patches import Dot, Patch, Polygon, Rectangle, Strip
+from .surface import Surface
+
+
+@dataclass(frozen=True)
+class Face:
+    """A face: its surface, and patches in the order they are laid on.
+
+    Parameters
+    ----------
+    surface : Surface
+        Where no patch lies.
+    patches : sequence of Strip, Dot, Rectangle or Polygon
+        A later patch may lie wholly inside an earlier one (metal on a wider layer); partial crossing is refused.
+    """
+
+    surface: Surface
+    patches: Sequence[Patch] = ()
+
+    def __post_init__(self) -> None:
+        problems = Complaints("Face")
+        object.__setattr__(self, "patches", tuple(self.patches))
+        if not isinstance(self.surface, Surface):
+            problems.add(f"surface = {self.surface!r}", "a Surface", "fc.Surface(J0_fA_per_cm2=10)")
+        for patch in self.patches:
+            if not isinstance(patch, Strip | Dot | Rectangle | Polygon):
+                problems.add(f"patch {patch!r}", "a Strip, Dot, Rectangle or Polygon")
+        names = [getattr(p, "name", "") for p in self.patches]
+        for name in sorted({n for n in names if names.count(n) > 1}):
+            problems.add(f"{names.count(name)} patches named {name!r}", "one patch per name on a face")
+        problems.raise_if_any()
+
+    def patch(self, name: str) -> Patch:
+        """The patch of that name.
+
+        Raises
+        ------
+        KeyError
+            No such patch.
+        """
+        for patch in self.patches:
+            if patch.name == name:
+                return patch
+        raise KeyError(name)

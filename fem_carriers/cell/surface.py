@@ -1,0 +1,120 @@
+"""Surfaces of a cell: recombination, doped layer, contact."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from ..errors import Complaints
+from . import checks
+from .checks import Varying
+
+
+@dataclass(frozen=True)
+class DopedLayer:
+    """A thin doped layer treated as a sheet.
+
+    Parameters
+    ----------
+    doping_type : {"n", "p"}
+        Type of the layer; opposite to the base it is a junction.
+    sheet_resistance_ohm_per_sq : float
+        Of the layer alone, Ω/sq; ``math.inf`` for a layer that does not conduct sideways.
+    """
+
+    doping_type: str
+    sheet_resistance_ohm_per_sq: float
+
+    def __post_init__(self) -> None:
+        problems = Complaints("DopedLayer")
+        checks.one_of(problems, "doping_type", self.doping_type, ("n", "p"))
+        checks.positive(problems, "sheet_resistance_ohm_per_sq", self.sheet_resistance_ohm_per_sq, inf=True)
+        problems.raise_if_any()
+
+
+@dataclass(frozen=True)
+class Contact:
+    """Metal on a surface; contacts of one name are one terminal.
+
+    Parameters
+    ----------
+    terminal : str
+        The terminal's name.
+    contact_resistivity_mohm_cm2 : float
+        ρc in mΩ·cm²; 0 is an ideal contact.
+    """
+
+    terminal: str
+    contact_resistivity_mohm_cm2: float = 0.0
+
+    def __post_init__(self) -> None:
+        problems = Complaints("Contact")
+        checks.name_of(problems, "terminal", self.terminal)
+        value = self.contact_resistivity_mohm_cm2
+        checks.positive(problems, "contact_resistivity_mohm_cm2", value, zero=True)
+        problems.raise_if_any()
+
+
+@dataclass(frozen=True)
+class Surface:
+    """A surface: how it recombines, which layer it carries, whether metal touches it.
+
+    With neither J0 nor srv the surface does not recombine.
+
+    Parameters
+    ----------
+    J0_fA_per_cm2 : float or function of position, optional
+        qU = J0 (np/ni² − 1); stated at 298.15 K and scaled with ni(T)².
+    srv_cm_per_s : float or function of position, optional
+        U = S Δn; ``math.inf`` is bare metal, Δn = 0.
+    J02_nA_per_cm2 : float
+        Adds J02 (√(np/ni²) − 1).
+    layer : DopedLayer, optional
+    contact : Contact, optional
+    """
+
+    J0_fA_per_cm2: Varying | None = None
+    srv_cm_per_s: Varying | None = None
+    J02_nA_per_cm2: float = 0.0
+    layer: DopedLayer | None = None
+    contact: Contact | None = None
+
+    def __post_init__(self) -> None:
+        problems = Complaints("Surface")
+        check_recombination(problems, self.J0_fA_per_cm2, self.srv_cm_per_s, self.J02_nA_per_cm2)
+        check_parts(problems, self.layer, self.contact)
+        problems.raise_if_any()
+
+    @property
+    def pins_to_zero(self) -> bool:
+        """True where infinite recombination fixes Δn = 0."""
+        return self.srv_cm_per_s == math.inf
+
+    def is_junction(self, base_type: str) -> bool:
+        """True if the layer's type is opposite to `base_type`."""
+        return self.layer is not None and self.layer.doping_type != base_type
+
+
+def check_recombination(problems: Complaints, J0: object, srv: object, J02: object) -> None:
+    """Complain about J0, S and J02 values that are not allowed, or given together."""
+    if J0 is not None:
+        checks.varying(problems, "J0_fA_per_cm2", J0, zero=True)
+    if srv is not None:
+        checks.varying(problems, "srv_cm_per_s", srv, zero=True, inf=True)
+    problems.unless(
+        J0 is None or srv is None,
+        f"J0_fA_per_cm2 = {J0!r} and srv_cm_per_s = {srv!r}",
+        "one recombination law per surface",
+        "J0 for doped or charged surfaces, srv for bare ones",
+    )
+    checks.positive(problems, "J02_nA_per_cm2", J02, zero=True)
+
+
+def check_parts(problems: Complaints, layer: object, contact: object) -> None:
+    """Complain unless layer and contact are of their classes or None."""
+    if not (layer is None or isinstance(layer, DopedLayer)):
+        problems.add(
+            f"layer = {layer!r}", "a DopedLayer or None", 'fc.DopedLayer("n", sheet_resistance_ohm_per_sq=120)'
+        )
+    if not (contact is None or isinstance(contact, Contact)):
+        problems.add(f"contact = {contact!r}", "a Contact or None", 'fc.Contact("front")')

@@ -1,0 +1,1 @@
+"""Fields and tables on disk, for any viewer and any spreadsheet."""

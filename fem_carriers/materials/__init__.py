@@ -1,0 +1,1 @@
+"""Silicon models, recombination laws, absorption and spectrum: pure functions of numbers and arrays."""

@@ -1,0 +1,187 @@
+"""Mesh of a unit cell: graded quads and hexahedra for rectangular patterns, extruded triangles for round and oblique ones."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..cell.masks import Spot
+from .extrude import extrude, periodic_rank, tensor_mesh
+from .fineness import MILD, Fineness, choose_fineness, singular_groups
+from .grading import graded_axis
+from .mesh import Mesh
+from .plan_view import triangulate
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from ..cell.plan import Layout
+    from ..cell.unit_cell import UnitCell
+
+
+@dataclass(frozen=True)
+class Outlines:
+    """Lines of both faces that cell edges must follow, as shapely geometry in µm.
+
+    Parameters
+    ----------
+    singular, mild, plain : list
+        Graded to the first step; to `MILD` times that; not graded (shading and light masks).
+    """
+
+    singular: list[Any]
+    mild: list[Any]
+    plain: list[Any]
+
+    @property
+    def all(self) -> list[Any]:
+        """Every line."""
+        return self.singular + self.mild + self.plain
+
+
+def mesh_unit_cell(cell: UnitCell, first_step_um: float | None = None, growth: float | None = None) -> Mesh:
+    """Mesh the modelled piece.
+
+    Parameters
+    ----------
+    cell : UnitCell
+    first_step_um : float, optional
+        Step beside singular edges.
+    growth : float, optional
+        Ratio of neighbouring steps away from them.
+
+    Returns
+    -------
+    Mesh
+        Surfaces "front", "front.<patch>", "rear", …, "x_min", …; one volume "base".
+    """
+    fineness = choose_fineness(cell, first_step_um, growth)
+    layouts = {side: cell.layout(side, fineness.circle_corners) for side in ("front", "rear")}
+    lines = collect_outlines(cell, layouts)
+    depths = depth_axis(cell, layouts, fineness)
+    if all(map(_is_rectilinear, lines.all)):
+        axes = [plan_axis(cell, axis, lines, fineness) for axis in ("x", "y")[: cell.dimension - 1]]
+        cells = tensor_mesh(*axes, depths)
+    else:
+        cells = _extruded(cell, layouts, lines, depths, fineness)
+    return Mesh(cells, name_surfaces(cells, cell, layouts), {"base": np.arange(cells.t.shape[1])})
+
+
+def collect_outlines(cell: UnitCell, layouts: dict[str, Layout]) -> Outlines:
+    """Outlines of patches, shading and light masks inside the piece."""
+    singular: list[Any] = []
+    mild: list[Any] = []
+    plain: list[Any] = []
+    for layout in layouts.values():
+        singular += [_inner_lines(g, cell) for g in singular_groups(layout, cell.base.doping_type)]
+        mild += [_inner_lines(r.shape, cell) for r in layout.regions]
+        plain.append(_inner_lines(layout.opaque, cell))
+    for source in cell.light.sources if cell.light is not None else ():
+        fitted = [m for m in source.mask if cell.dimension == 2 or not isinstance(m, Spot)]
+        plain += [_inner_lines(m.outline(cell.dimension), cell) for m in fitted]
+    return Outlines(*([line for line in lines if not line.is_empty] for lines in (singular, mild, plain)))
+
+
+def _inner_lines(shape: Any, cell: UnitCell) -> Any:
+    """Outline of a shape without what lies on the sides of the piece."""
+    from shapely import LineString
+
+    box = cell.frame.box
+    inside = shape.intersection(box)
+    if inside.area == 0:
+        return LineString()
+    line = inside.boundary.difference(box.boundary.buffer(1e-7))
+    return line if line.length > 1e-6 else LineString()
+
+
+def _segments(lines: list[Any]) -> NDArray[np.float64]:
+    """End points of all straight pieces, shape (n, 2 ends, 2 coordinates)."""
+    pieces = [np.asarray(part.coords) for line in lines for part in getattr(line, "geoms", [line])]
+    return np.concatenate([np.stack([p[:-1], p[1:]], axis=1) for p in pieces] or [np.zeros((0, 2, 2))])
+
+
+def _is_rectilinear(line: Any) -> bool:
+    extent = np.abs(np.diff(_segments([line]), axis=1))[:, 0]
+    return bool((extent.min(axis=1) < 1e-9).all())
+
+
+def plan_axis(cell: UnitCell, axis: str, lines: Outlines, fineness: Fineness) -> NDArray[np.float64]:
+    """Graded grid along x or y, µm."""
+    low, high = cell.frame.x if axis == "x" else cell.frame.y
+    fine = [(p, fineness.first_step_um) for p in _positions(lines.singular, axis)]
+    fine += [(p, MILD * fineness.first_step_um) for p in _positions(lines.mild, axis)]
+    for side, position in ((f"{axis}_min", low), (f"{axis}_max", high)):
+        if side in cell.sides:
+            fine.append((position, fineness.plain_step_um))
+    fine = [(p, s) for p, s in fine if low <= p <= high]
+    if axis in cell.periodic_axes:
+        fine = _also_across(fine, low, high)
+    fixed = [p for p in _positions(lines.plain, axis) if low < p < high]
+    return graded_axis(low, high, fine, fineness.growth, fineness.largest_um, fixed)
+
+
+def _also_across(fine: list[tuple[float, float]], low: float, high: float) -> list[tuple[float, float]]:
+    """Edges on one periodic side are edges on the other too."""
+    ends = [s for p, s in fine if p in (low, high)]
+    return fine + [(p, min(ends)) for p in (low, high) if ends]
+
+
+def _positions(lines: list[Any], axis: str) -> list[float]:
+    """Coordinates of the lines at right angles to an axis."""
+    ends = _segments(lines)
+    i = "xy".index(axis)
+    across = np.abs(ends[:, 0, i] - ends[:, 1, i]) < 1e-9
+    return [float(v) for v in np.unique(np.round(ends[across, 0, i], 9))]
+
+
+def depth_axis(cell: UnitCell, layouts: dict[str, Layout], fineness: Fineness) -> NDArray[np.float64]:
+    """Graded grid along z from rear to front, µm."""
+    fine = []
+    for side, position in (("rear", 0.0), ("front", cell.thickness_um)):
+        layout = layouts[side]
+        if len(singular_groups(layout, cell.base.doping_type)) > 1:
+            step = fineness.first_step_um
+        elif len(layout.regions) > 1:
+            step = min(MILD * fineness.first_step_um, fineness.plain_step_um)
+        else:
+            step = fineness.plain_step_um
+        fine.append((position, step))
+    return graded_axis(0.0, cell.thickness_um, fine, fineness.growth, fineness.largest_depth_um)
+
+
+def _extruded(
+    cell: UnitCell, layouts: dict[str, Layout], lines: Outlines, depths: NDArray[np.float64], fineness: Fineness
+) -> Any:
+    """Plan-view triangles fitted to both faces' outlines, through the graded depths."""
+    from shapely import union_all
+
+    box, groups = cell.frame.box, [g for layout in layouts.values() for g in singular_groups(layout, cell.base.doping_type)]
+    graded = union_all(lines.singular).buffer(1e-6)
+    coarse = [rest for line in lines.mild + lines.plain if (rest := line.difference(graded)).length > 1e-3]
+    periodic = {f"periodic_{axis}": axis in cell.periodic_axes for axis in ("x", "y")}
+    plan = triangulate(
+        groups, box, first_step=fineness.first_step_um, growth=fineness.growth, largest=fineness.largest_um,
+        coarse_lines=coarse, **periodic,
+    )  # fmt: skip
+    return extrude(plan, depths, periodic_rank(plan, *periodic.values()) if cell.periodic_axes else None)
+
+
+def name_surfaces(cells: Any, cell: UnitCell, layouts: dict[str, Layout]) -> dict[str, NDArray[np.int64]]:
+    """Boundary facets by name: regions of front and rear, and the sides."""
+    from shapely import contains_xy
+
+    facets = cells.boundary_facets()
+    centre = cells.p[:, cells.facets[:, facets]].mean(axis=1) * 1e4
+    surfaces = {}
+    for side, height in (("rear", 0.0), ("front", cell.thickness_um)):
+        on = np.abs(centre[-1] - height) < 1e-6 * cell.thickness_um
+        y = centre[1] if cell.dimension == 3 else np.full_like(centre[0], np.mean(cell.frame.y))
+        for region in layouts[side].regions:
+            surfaces[region.name] = facets[on & contains_xy(region.shape, centre[0], y)]
+    for i, axis in enumerate("xy"[: cell.dimension - 1]):
+        low, high = cell.frame.x if axis == "x" else cell.frame.y
+        for name, position in ((f"{axis}_min", low), (f"{axis}_max", high)):
+            surfaces[name] = facets[np.abs(centre[i] - position) < 1e-7 * (high - low)]
+    return surfaces

@@ -1,0 +1,1 @@
+"""Window and plots; the only place that draws."""

@@ -1,0 +1,107 @@
+"""Newton's method for the excess density, with a named outcome."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..errors import SolverError
+from .linear import Factorization
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import NDArray
+
+LARGEST_STEPS = 80
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """How a solution was reached.
+
+    Parameters
+    ----------
+    name : str
+        "converged"; anything else is raised as a `SolverError`.
+    steps : int
+        Newton steps.
+    residual : float
+        Sum of |F| over the free equations, relative to the larger of generation and recombination.
+    """
+
+    name: str
+    steps: int
+    residual: float
+
+    def __str__(self) -> str:
+        return f"{self.name} in {self.steps} steps, residual {self.residual:.1e} of the carriers"
+
+
+def newton(
+    residual: Callable[[NDArray[np.float64]], NDArray[np.float64]],
+    jacobian: Callable[[NDArray[np.float64]], Any],
+    start: NDArray[np.float64],
+    throughput: Callable[[NDArray[np.float64]], float],
+    *,
+    tolerance: float = 1e-11,
+) -> tuple[NDArray[np.float64], Outcome]:
+    """Solve F(x) = 0 by damped Newton steps.
+
+    A step is halved until the sum of |F| falls. It is done when the sum of |F| is below `tolerance` of the throughput
+    of carriers, or when steps no longer change x and F is at round-off.
+
+    Parameters
+    ----------
+    residual, jacobian : functions of x (n,), giving F (n,) and dF/dx (n, n)
+    start : (n,) array
+    throughput : function
+        The larger of generation and total recombination at x.
+    tolerance : float
+
+    Returns
+    -------
+    x : (n,) array
+    outcome : Outcome
+
+    Raises
+    ------
+    SolverError
+        "not converged", "not a number" or "singular", with advice.
+    """
+    x, F = start, residual(start)
+    best = np.inf
+    for step in range(LARGEST_STEPS):
+        size = np.abs(F).sum() / max(throughput(x), 1e-300)
+        if not np.isfinite(size):
+            raise SolverError(
+                "not a number", "The residual is not finite; check functions of position and extreme inputs."
+            )
+        if size <= tolerance and (step > 0 or size == 0):
+            return x, Outcome("converged", step, float(size))
+        with Factorization(jacobian(x)) as factors:
+            change = -factors.solve(F)
+        stalled = np.abs(change).max() <= 1e-12 * np.abs(x).max() and size >= 0.5 * best
+        if stalled and size <= 1e-9:
+            return x, Outcome("converged", step, float(size))
+        best = min(best, size)
+        x, F = _damped(residual, x, F, change)
+    raise SolverError(
+        "not converged",
+        f"Newton's method stopped after {LARGEST_STEPS} steps at a residual of {size:.1e} of the carriers. "
+        "Try a smaller first step, a lower light level first, or check for extreme inputs.",
+    )
+
+
+def _damped(residual: Any, x: Any, F: Any, change: Any) -> tuple[Any, Any]:
+    """The longest of the steps 1, 1/2, 1/4, … that lowers the sum of |F|; the shortest one if none does."""
+    before, scale = np.abs(F).sum(), 1.0
+    while True:
+        trial = x + scale * change
+        F_trial = residual(trial)
+        after = np.abs(F_trial).sum()
+        if (np.isfinite(after) and after < before) or scale < 1e-3:
+            return trial, F_trial
+        scale /= 2

@@ -1,0 +1,160 @@
+"""A description on a mesh: what is solved."""
+
+from __future__ import annotations
+
+import dataclasses
+import difflib
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+from ..cell.base import Base
+from ..cell.light import Light
+from ..cell.surface import Surface
+from ..cell.unit_cell import UnitCell
+from ..errors import Complaints
+from ..meshing.mesh import Mesh
+from .generation import LitPlane
+from .lit_planes import plane_of_cell, plane_of_facets
+from .spaces import Space
+
+if TYPE_CHECKING:
+    from ..cell.base import Equilibrium
+
+
+@dataclass(frozen=True, eq=False)
+class Problem:
+    """Everything a solver needs; made by `problem` from a unit cell, or directly on an imported mesh.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    volumes : mapping of str to Base
+        One for every named volume. Doping, mobilities and ni must agree; lifetimes may differ.
+    surfaces : mapping of str to Surface
+        A named surface left out is insulated (a mirror plane).
+    light : Light, optional
+    lit_surface : str, or mapping of {"front", "rear"} to str
+        The flat surface(s) that light enters.
+    cell_area_cm2 : float
+        Area that currents refer to; in 2-D per cm of depth.
+    order : {1, 2}
+        Order of the Lagrange elements.
+    cell : UnitCell, optional
+        The unit cell the mesh was built from; gives shading outlines and periodic sides.
+
+    Raises
+    ------
+    InputError
+        Every problem of the input at once.
+    """
+
+    mesh: Mesh
+    volumes: Mapping[str, Base]
+    surfaces: Mapping[str, Surface]
+    light: Light | None = None
+    lit_surface: str | Mapping[str, str] | None = None
+    cell_area_cm2: float = 0.0
+    order: int = 2
+    cell: UnitCell | None = field(default=None, repr=False)
+
+    def __post_init__(self) -> None:
+        problems = Complaints("Problem")
+        problems.unless(isinstance(self.mesh, Mesh), f"mesh = {self.mesh!r}", "a Mesh", "fc.read_mesh(...)")
+        problems.unless(self.order in (1, 2), f"order = {self.order!r}", "1 or 2")
+        good = isinstance(self.cell_area_cm2, int | float) and self.cell_area_cm2 > 0
+        problems.unless(good, f"cell_area_cm2 = {self.cell_area_cm2!r}", "the plan area of the piece, above 0")
+        problems.raise_if_any()
+        self._check_names(problems, "volume", self.volumes, self.mesh.volumes, Base, all_needed=True)
+        self._check_names(problems, "surface", self.surfaces, self.mesh.surfaces, Surface, all_needed=False)
+        self._check_inner_surfaces(problems)
+        self._check_one_doping(problems)
+        self._check_lit(problems)
+        problems.raise_if_any()
+
+    def _check_names(
+        self, problems: Complaints, what: str, given: Mapping[str, Any], known: Mapping[str, Any], kind: type,
+        *, all_needed: bool,
+    ) -> None:  # fmt: skip
+        for name, value in given.items():
+            if name not in known:
+                near = difflib.get_close_matches(name, known, 1)
+                problems.add(f"{what} {name!r}", f"one of {', '.join(known)}", repr(near[0]) if near else "")
+            problems.unless(isinstance(value, kind), f"{what} {name!r} = {value!r}", f"a {kind.__name__}")
+        for name in known if all_needed else ():
+            problems.unless(name in given, f"no Base for the volume {name!r}", "one Base for every volume")
+
+    def _check_inner_surfaces(self, problems: Complaints) -> None:
+        for name in self.surfaces:
+            if name in self.mesh.surfaces and name not in self.space.surfaces:
+                problems.add(f"surface {name!r} lies inside the volume or is empty", "surfaces on the outside")
+
+    def _check_one_doping(self, problems: Complaints) -> None:
+        bases = [b for b in self.volumes.values() if isinstance(b, Base)]
+        if len({b.equilibrium() for b in bases}) > 1:
+            problems.add(
+                "volumes that differ in doping, mobility, ni or temperature",
+                "volumes that differ in lifetime, Auger and radiative recombination only",
+                "one doping for all volumes; describe doped regions as layers",
+            )
+
+    def _check_lit(self, problems: Complaints) -> None:
+        for name in self._lit_names.values():
+            problems.unless(
+                name in self.mesh.surfaces, f"lit_surface {name!r}", f"one of {', '.join(self.mesh.surfaces)}"
+            )
+        for source in self.light.sources if self.light is not None else ():
+            if self.cell is None and source.enters not in self._lit_names:
+                problems.add(
+                    f"light that enters the {source.enters} of an imported mesh",
+                    'lit_surface, or {"front": ..., "rear": ...}, naming the flat surface it enters',
+                )
+
+    @property
+    def _lit_names(self) -> Mapping[str, str]:
+        if self.lit_surface is None:
+            return {}
+        return {"front": self.lit_surface} if isinstance(self.lit_surface, str) else self.lit_surface
+
+    @cached_property
+    def space(self) -> Space:
+        """The finite-element space."""
+        return Space(self.mesh, self.order)
+
+    @property
+    def base(self) -> Base:
+        """One of the bases; all agree in doping, mobility, ni and temperature."""
+        return next(iter(self.volumes.values()))
+
+    @cached_property
+    def equilibrium(self) -> Equilibrium:
+        """Equilibrium densities and mobilities of the base."""
+        return self.base.equilibrium()
+
+    @cached_property
+    def lit_planes(self) -> dict[str, LitPlane]:
+        """The planes light may enter."""
+        if self.cell is not None:
+            return {side: plane_of_cell(self.cell, side) for side in ("front", "rear")}
+        return {side: plane_of_facets(self.mesh, name) for side, name in self._lit_names.items()}
+
+    @property
+    def periodic_axes(self) -> tuple[str, ...]:
+        """Axes along which opposite sides are one and the same."""
+        return self.cell.periodic_axes if self.cell is not None else ()
+
+    def junctions(self) -> list[str]:
+        """Surfaces whose layer is of the type opposite to the base."""
+        return [name for name, s in self.surfaces.items() if s.is_junction(self.base.doping_type)]
+
+    def changed(self, **changes: Any) -> Problem:
+        """A copy with other inputs on the same mesh, e.g. ``problem.changed(light=...)``."""
+        return dataclasses.replace(self, **changes)
+
+    def refined(self) -> Problem:
+        """The same on the uniformly refined mesh."""
+        return dataclasses.replace(self, mesh=self.mesh.refined())
+
+    def __repr__(self) -> str:
+        return f"Problem on {self.mesh!r}; {self.space.size} unknowns of order {self.order}"
