@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 
 @dataclass(frozen=True)
@@ -63,6 +64,20 @@ class SolverError(FemCarriersError, RuntimeError):
 
 class BalanceError(SolverError):
     """The carrier ledger does not close; the solution is refused."""
+
+
+class SweepInterrupted(KeyboardInterrupt):
+    """A sweep stopped by Ctrl-C; ``table`` holds the points finished by then.
+
+    It is a KeyboardInterrupt, so that ``except Exception`` in a script does not swallow the interruption.
+    """
+
+    def __init__(self, table: Any, points: int) -> None:
+        self.table, self.points = table, points
+        super().__init__(table, points)
+
+    def __str__(self) -> str:
+        return f"sweep interrupted: {len(self.table)} of {self.points} points are finished; they are in .table"
 
 
 class ModelWarning(UserWarning):

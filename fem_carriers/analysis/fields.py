@@ -13,11 +13,12 @@ from ..transport.generation import generation_rate
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..transport.bipolar_newton import BipolarState
     from ..transport.problem import Problem
     from ..transport.steady import ExcessState
 
 
-def nodal_fields(state: ExcessState) -> dict[str, NDArray[np.float64]]:
+def nodal_fields(state: ExcessState | BipolarState) -> dict[str, NDArray[np.float64]]:
     """Fields at the nodes, by name with unit; see `Solution.nodal_fields`."""
     system, dn = state.system, state.dn
     problem, space = system.problem, system.space
@@ -36,7 +37,7 @@ def nodal_fields(state: ExcessState) -> dict[str, NDArray[np.float64]]:
     }
 
 
-def node_average(state: ExcessState, values: Any) -> NDArray[np.float64]:
+def node_average(state: ExcessState | BipolarState, values: Any) -> NDArray[np.float64]:
     """Average of quadrature values (n_cells, n_points) over the cells around each node, weighted by volume."""
     bulk = state.system.space.bulk
     cell_values, sizes = (values * bulk.dx).sum(axis=1), bulk.dx.sum(axis=1)
@@ -46,7 +47,7 @@ def node_average(state: ExcessState, values: Any) -> NDArray[np.float64]:
     return np.asarray(total / np.bincount(dofs.ravel(), np.tile(sizes, local), n))
 
 
-def diffusion_length_um(state: ExcessState) -> NDArray[np.float64]:
+def diffusion_length_um(state: ExcessState | BipolarState) -> NDArray[np.float64]:
     """√(D Δn / R) per cell in µm; see `Solution.diffusion_length_um`."""
     system = state.system
     bulk = system.space.bulk

@@ -12,6 +12,7 @@ from ..units import MA
 if TYPE_CHECKING:
     import pandas as pd
 
+    from ..transport.bipolar_newton import BipolarState
     from ..transport.steady import ExcessState
 
 LARGEST_MISCLOSURE = 1e-10
@@ -96,12 +97,12 @@ class Ledger:
         return str(self.table.to_html(float_format="{:.6g}".format))
 
 
-def make_ledger(state: ExcessState) -> Ledger:
+def make_ledger(state: ExcessState | BipolarState) -> Ledger:
     """Ledger of a solved state.
 
     Parameters
     ----------
-    state : ExcessState
+    state : ExcessState or BipolarState
 
     Returns
     -------

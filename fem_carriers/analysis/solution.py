@@ -30,14 +30,14 @@ class Solution:
 
     Parameters
     ----------
-    state : ExcessState
+    state : ExcessState or BipolarState
     ledger : Ledger
         Where the generated carriers went, mA/cm² of cell area.
     warnings : tuple of str
         Where the model's assumptions are strained.
     """
 
-    state: ExcessState
+    state: Any
     ledger: Ledger
     warnings: tuple[str, ...] = ()
 

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any, Final
 
 from ..errors import Complaints
 from . import checks
-from .surface import Surface, check_parts, check_recombination
+from .surface import Surface, check_parts, check_recombination, check_shunt
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -25,7 +25,7 @@ class _Below:
 
 
 BELOW: Final = _Below()
-SURFACE_FIELDS = ("J0_fA_per_cm2", "srv_cm_per_s", "J02_nA_per_cm2", "layer", "contact")
+SURFACE_FIELDS = ("J0_fA_per_cm2", "srv_cm_per_s", "J02_nA_per_cm2", "shunt_ohm_cm2", "layer", "contact")
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -35,6 +35,7 @@ class _Changes:
     J0_fA_per_cm2: Any = BELOW
     srv_cm_per_s: Any = BELOW
     J02_nA_per_cm2: Any = BELOW
+    shunt_ohm_cm2: Any = BELOW
     layer: Any = BELOW
     contact: Any = BELOW
 
@@ -61,6 +62,7 @@ class _Changes:
         J02 = 0.0 if stated["J02_nA_per_cm2"] is None else stated["J02_nA_per_cm2"]
         check_recombination(problems, stated["J0_fA_per_cm2"], stated["srv_cm_per_s"], J02)
         check_parts(problems, stated["layer"], stated["contact"])
+        check_shunt(problems, stated["shunt_ohm_cm2"])
 
 
 @dataclass(frozen=True)

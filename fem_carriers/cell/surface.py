@@ -20,15 +20,24 @@ class DopedLayer:
         Type of the layer; opposite to the base it is a junction.
     sheet_resistance_ohm_per_sq : float
         Of the layer alone, Ω/sq; ``math.inf`` for a layer that does not conduct sideways.
+    absorbing_depth_um : float
+        The layer absorbs the light of this depth (counted as part of the base's thickness).
+    collection : float
+        Share of the carriers generated in that depth that reach the base side; the rest is lost in the layer.
     """
 
     doping_type: str
     sheet_resistance_ohm_per_sq: float
+    absorbing_depth_um: float = 0.0
+    collection: float = 1.0
 
     def __post_init__(self) -> None:
         problems = Complaints("DopedLayer")
         checks.one_of(problems, "doping_type", self.doping_type, ("n", "p"))
         checks.positive(problems, "sheet_resistance_ohm_per_sq", self.sheet_resistance_ohm_per_sq, inf=True)
+        checks.positive(problems, "absorbing_depth_um", self.absorbing_depth_um, zero=True)
+        share = checks.is_number(self.collection) and 0 <= self.collection <= 1
+        problems.unless(share, f"collection = {self.collection!r}", "a share from 0 to 1")
         problems.raise_if_any()
 
 
@@ -69,6 +78,9 @@ class Surface:
         U = S Δn; ``math.inf`` is bare metal, Δn = 0.
     J02_nA_per_cm2 : float
         Adds J02 (√(np/ni²) − 1).
+    shunt_ohm_cm2 : float, optional
+        Ohmic leakage across a junction: adds (φp − φn)/shunt. On opposite-type layers only; without effect in the
+        excess-carrier form at 0 V.
     layer : DopedLayer, optional
     contact : Contact, optional
     """
@@ -76,6 +88,7 @@ class Surface:
     J0_fA_per_cm2: Varying | None = None
     srv_cm_per_s: Varying | None = None
     J02_nA_per_cm2: float = 0.0
+    shunt_ohm_cm2: float | None = None
     layer: DopedLayer | None = None
     contact: Contact | None = None
 
@@ -83,6 +96,7 @@ class Surface:
         problems = Complaints("Surface")
         check_recombination(problems, self.J0_fA_per_cm2, self.srv_cm_per_s, self.J02_nA_per_cm2)
         check_parts(problems, self.layer, self.contact)
+        check_shunt(problems, self.shunt_ohm_cm2)
         problems.raise_if_any()
 
     @property
@@ -108,6 +122,12 @@ def check_recombination(problems: Complaints, J0: object, srv: object, J02: obje
         "J0 for doped or charged surfaces, srv for bare ones",
     )
     checks.positive(problems, "J02_nA_per_cm2", J02, zero=True)
+
+
+def check_shunt(problems: Complaints, shunt: object) -> None:
+    """Complain unless the shunt is None or positive."""
+    if shunt is not None:
+        checks.positive(problems, "shunt_ohm_cm2", shunt)
 
 
 def check_parts(problems: Complaints, layer: object, contact: object) -> None:

@@ -6,6 +6,7 @@ import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+from ..cell.patches import Dot, Polygon
 from ..errors import Complaints
 from ..units import US
 
@@ -52,7 +53,8 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     ----------
     cell : UnitCell
     first_step_um, growth : float, optional
-        Replace the defaults: 1/400 (2-D) or 1/40 (3-D) of the smallest feature, and 2 or 2.2.
+        Replace the defaults: 1/400 (2-D) or 1/40 (3-D) of the smallest feature, and 2, or 2.2 where the mesh can be
+        hexahedra (3-D, strips and rectangles only).
 
     Raises
     ------
@@ -72,12 +74,17 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     short = diffusion_length_um(cell.base, cell) / 3
     return Fineness(
         first_step_um=first,
-        growth=growth or (2.0 if flat else 2.2),
+        growth=growth or (2.0 if flat or _has_other_than_boxes(cell) else 2.2),
         largest_um=width / 6,
         largest_depth_um=cell.thickness_um / 5,
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),
         circle_corners=circle_corners(first, cell),
     )
+
+
+def _has_other_than_boxes(cell: UnitCell) -> bool:
+    patches = [*cell.front.patches, *cell.rear.patches]  # type: ignore[union-attr]
+    return any(isinstance(patch, Dot | Polygon) for patch in patches)
 
 
 def circle_corners(first_step_um: float, cell: UnitCell) -> int:

@@ -1,118 +1,130 @@
 """Plan view of straight and round outlines: a grid of stretched cells, bent onto the circles around each dot.
 
-Grid lines beside a straight outline run along the whole outline, so the cells there are long and thin, and a few of them
-do. A dot is a rectangle of grid lines whose outline is moved outwards onto the circle. In the sectors above and below the
+Grid lines beside a straight outline run along all of it, so the cells there are long and thin, and a few of them do.
+A dot is a rectangle of grid lines whose outline is moved outwards onto the circle. In the sectors above and below the
 dot's centre only y moves, beside it only x, so that straight outlines that cross the dot stay straight.
 """
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .islands import Island, bulge
 from .plan_view import PlanMesh
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Sequence
+    from collections.abc import Sequence
 
     from numpy.typing import NDArray
 
-    from ..cell.unit_cell import UnitCell
 
-REACH = 2.2
-"""Half width of the zone in which grid lines bend, in radii of the outermost circle."""
-NARROW = 1.08
-"""The same at least."""
-CLEAR = 0.03
-"""Least distance between a straight outline that crosses a dot and the corner of the dot's rectangle, in radii."""
-ROOMY = 0.25
-"""A distance that needs no better."""
-SAME_UM = 1e-6
-"""Lengths below are round-off."""
+def stretched_plan(
+    x_um: NDArray[np.float64], y_um: NDArray[np.float64], islands: Sequence[Island], periodic: tuple[bool, bool]
+) -> PlanMesh | None:
+    """Triangles of the grid x × y, bent onto the islands' circles.
 
-
-@dataclass(frozen=True)
-class Dots:
-    """Concentric regular polygons that stand for circles.
+    Each cell is cut along the diagonal that leaves the wider smallest angle; where both are alike, diagonals alternate.
 
     Parameters
     ----------
-    center_um : (x, y)
-    radii_um : tuple of float
-        Of the corners, ascending.
-    segments : int
-        Corners of a full circle, a multiple of 8, four of them on the axes through the centre.
-    """
-
-    center_um: tuple[float, float]
-    radii_um: tuple[float, ...]
-    segments: int
-
-
-@dataclass(frozen=True)
-class Island:
-    """Dots, and the zone around them in which grid lines bend.
-
-    Parameters
-    ----------
-    dots : Dots
-    corner : int
-        The polygon's corner (counted from the x axis) that is the corner of the rectangle of grid lines.
-    core : float
-        Share of the innermost rectangle that stays as it is.
-    reach_um : ((left, right), (below, above))
-        Distances from the centre beyond which nothing moves.
-    """
-
-    dots: Dots
-    corner: int
-    core: float
-    reach_um: tuple[tuple[float, float], tuple[float, float]]
-
-    def half_sides(self, radius_um: float) -> tuple[float, float]:
-        """Half width and half height of the rectangle that becomes a circle, µm."""
-        angle = 2 * math.pi * self.corner / self.dots.segments
-        return radius_um * math.cos(angle), radius_um * math.sin(angle)
-
-
-def find_dots(cell: UnitCell, segments: int) -> list[Dots]:
-    """All dots, and round shades, that reach into the modelled piece.
-
-    Parameters
-    ----------
-    cell : UnitCell
-    segments : int
-        Corners of a full circle.
+    x_um, y_um : (n,) float arrays
+        Ascending; they contain the positions of `island_positions` within the piece.
+    islands : sequence of Island
+    periodic : (bool, bool)
+        Whether opposite sides across x (across y) are one and the same.
 
     Returns
     -------
-    list of Dots
-        Ordered by centre.
+    PlanMesh, or None
+        None if a triangle would be folded.
     """
-    from ..cell.outlines import patch_outlines, shade_size
-    from ..cell.patches import Dot
-
-    frame, found = cell.frame, {}
-    wide = replace(frame, x=_wider(frame.x, frame.period_x), y=_wider(frame.y, frame.period_y or 0.0))
-    for patch in (p for face in (cell.front, cell.rear) for p in face.patches if isinstance(p, Dot)):  # type: ignore[union-attr]
-        shapes = patch_outlines(patch, wide, segments)
-        if shade_size(patch, has_contact=True):
-            shapes += patch_outlines(patch, wide, segments, opaque=True)
-        for shape in shapes:
-            if shape.intersection(frame.box).area > SAME_UM:
-                x, y = shape.centroid.coords[0]
-                key = (round(x, 6) + 0.0, round(y, 6) + 0.0)
-                found.setdefault(key, set()).add(round(shape.bounds[2] - x, 9))
-    return [Dots(center, _distinct(radii), segments) for center, radii in sorted(found.items())]
+    points = np.stack(np.meshgrid(x_um, y_um, indexing="ij")).reshape(2, -1)
+    moved = points + sum((_shift(points, island) for island in islands), np.zeros_like(points))
+    moved = _sides_kept(points, moved, x_um, y_um, periodic)
+    plan = PlanMesh(moved, _triangles(moved, x_um.size, y_um.size))
+    a, b, c = (moved[:, corner] for corner in plan.triangles)
+    doubled = (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
+    return plan if doubled.min() > 0 else None
 
 
-def _wider(span: tuple[float, float], by: float) -> tuple[float, float]:
-    return span[0] - by, span[1] + by
+def _shift(points: NDArray[np.float64], island: Island) -> NDArray[np.float64]:
+    """Displacement (2, n) of the points of an island's zone; the nested rectangles have levels 0 (centre), 1, 2, …"""
+    radii, count = np.asarray(island.dots.radii_um), len(island.dots.radii_um)
+    local = points - np.asarray(island.dots.center_um)[:, None]
+    halves = np.array([island.half_sides(r) for r in radii])  # (count, 2)
+    knots = np.arange(count + 2.0)
+    sizes = [_sizes(local[i] > 0, halves[:, i], island.reach_um[i]) for i in (0, 1)]  # (count + 2, n) each
+    level = np.stack([_between(np.abs(local[i]), sizes[i]) for i in (0, 1)])
+    top = level.max(axis=0)
+    amount = np.interp(top, [0.0, island.core, *knots[1:]], [0.0, 0.0, *radii, 0.0], right=0.0)
+    shift = np.zeros_like(points)
+    for i in (0, 1):
+        mine = (level[i] >= level[1 - i]) & (amount > 0)
+        if not mine.any():
+            continue
+        there = _size_at(top[mine], sizes[1 - i][:, mine])
+        along = np.abs(local[1 - i, mine]) / there * halves[0, 1 - i] / radii[0]  # on the circle of radius 1
+        shift[i, mine] = np.sign(local[i, mine]) * amount[mine] * bulge(island, i, along)
+    return shift
 
 
-def _distinct(radii: set[float]) -> tuple[float, ...]:
-    ordered = sorted(radii)
-    return tuple(r for i, r in enumerate(ordered) if i == 0 or r - ordered[i - 1] > SAME_UM)
+def _sizes(positive: NDArray[np.bool_], halves: NDArray[np.float64], reach: tuple[float, float]) -> NDArray[np.float64]:
+    """Distances from the centre of the nested rectangles' sides on each point's side of the centre."""
+    inner = np.broadcast_to(np.array([0.0, *halves])[:, None], (halves.size + 1, positive.size))
+    return np.vstack([inner, np.where(positive, reach[1], reach[0])])
+
+
+def _between(distance: NDArray[np.float64], sizes: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Level of a distance among ascending sizes, linear between them; beyond the last one the number of sizes."""
+    below = np.clip((distance >= sizes).sum(axis=0) - 1, 0, len(sizes) - 2)
+    low, high = np.take_along_axis(sizes, np.stack([below, below + 1]), axis=0)
+    share = (distance - low) / (high - low)
+    return np.where(share > 1 + 1e-12, float(len(sizes)), below + share)
+
+
+def _size_at(level: NDArray[np.float64], sizes: NDArray[np.float64]) -> NDArray[np.float64]:
+    """The distance that has a level; the inverse of `_between`."""
+    below = np.minimum(level.astype(int), len(sizes) - 2)
+    low, high = np.take_along_axis(sizes, np.stack([below, below + 1]), axis=0)
+    return np.asarray(low + (high - low) * (level - below))
+
+
+def _sides_kept(
+    points: NDArray[np.float64],
+    moved: NDArray[np.float64],
+    x_um: NDArray[np.float64],
+    y_um: NDArray[np.float64],
+    periodic: tuple[bool, bool],
+) -> NDArray[np.float64]:
+    """Sides exactly where they were, and opposite periodic sides alike to the last digit."""
+    moved = moved.copy()
+    for axis, positions in enumerate((x_um, y_um)):
+        low, high = points[axis] == positions[0], points[axis] == positions[-1]
+        moved[axis, low], moved[axis, high] = positions[0], positions[-1]
+        if periodic[axis]:
+            moved[1 - axis, high] = moved[1 - axis, low]
+    return moved
+
+
+def _triangles(points: NDArray[np.float64], nx: int, ny: int) -> NDArray[np.int64]:
+    """Corners, counter-clockwise, of two triangles per cell; point (i, j) has number i·ny + j."""
+    i, j = (index.ravel() for index in np.meshgrid(np.arange(nx - 1), np.arange(ny - 1), indexing="ij"))
+    a = i * ny + j
+    quad = np.stack([a, a + ny, a + ny + 1, a + 1])  # counter-clockwise
+    rising = quad[[[0, 1, 2], [0, 2, 3]]]  # along the diagonal 0-2
+    falling = quad[[[0, 1, 3], [1, 2, 3]]]
+    gain = _shape(points, rising) - _shape(points, falling)
+    take = np.where(np.abs(gain) > 1e-6, gain > 0, (i + j) % 2 == 0)
+    chosen = np.where(take, rising, falling)  # (2 triangles, 3 corners, n)
+    return np.asarray(chosen.transpose(1, 2, 0).reshape(3, -1))
+
+
+def _shape(points: NDArray[np.float64], pair: NDArray[np.int64]) -> NDArray[np.float64]:
+    """Smallest sine-like measure, twice the area over the two longest sides, of each pair of triangles."""
+    corners = points[:, pair]  # (2, 2 triangles, 3 corners, n)
+    sides = np.roll(corners, -1, axis=2) - corners
+    doubled = sides[0, :, 0] * sides[1, :, 1] - sides[1, :, 0] * sides[0, :, 1]
+    length = np.sort(np.hypot(*sides), axis=1)
+    return np.asarray((doubled / (length[:, 1] * length[:, 2])).min(axis=0))

@@ -1,4 +1,4 @@
-"""Mesh of a unit cell: graded quads and hexahedra for rectangular patterns, extruded triangles for round and oblique ones."""
+"""Mesh of a unit cell: graded quads and hexahedra for rectangular patterns, extruded triangles for all others."""
 
 from __future__ import annotations
 
@@ -11,14 +11,18 @@ from ..cell.masks import Spot
 from .extrude import extrude, periodic_rank, tensor_mesh
 from .fineness import MILD, Fineness, choose_fineness, singular_groups
 from .grading import graded_axis
+from .islands import find_dots, fit_islands, island_positions, on_dots
 from .mesh import Mesh
 from .plan_view import triangulate
+from .stretched_plan import stretched_plan
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from ..cell.plan import Layout
     from ..cell.unit_cell import UnitCell
+    from .islands import Island
+    from .plan_view import PlanMesh
 
 
 @dataclass(frozen=True)
@@ -107,10 +111,16 @@ def _is_rectilinear(line: Any) -> bool:
     return bool((extent.min(axis=1) < 1e-9).all())
 
 
-def plan_axis(cell: UnitCell, axis: str, lines: Outlines, fineness: Fineness) -> NDArray[np.float64]:
-    """Graded grid along x or y, µm."""
+def plan_axis(
+    cell: UnitCell,
+    axis: str,
+    lines: Outlines,
+    fineness: Fineness,
+    more: tuple[list[tuple[float, float]], list[float]] = ([], []),
+) -> NDArray[np.float64]:
+    """Graded grid along x or y, µm; `more` adds positions with first steps, and positions that are nodes."""
     low, high = cell.frame.x if axis == "x" else cell.frame.y
-    fine = [(p, fineness.first_step_um) for p in _positions(lines.singular, axis)]
+    fine = [(p, fineness.first_step_um) for p in _positions(lines.singular, axis)] + more[0]
     fine += [(p, MILD * fineness.first_step_um) for p in _positions(lines.mild, axis)]
     for side, position in ((f"{axis}_min", low), (f"{axis}_max", high)):
         if side in cell.sides:
@@ -118,7 +128,7 @@ def plan_axis(cell: UnitCell, axis: str, lines: Outlines, fineness: Fineness) ->
     fine = [(p, s) for p, s in fine if low <= p <= high]
     if axis in cell.periodic_axes:
         fine = _also_across(fine, low, high)
-    fixed = [p for p in _positions(lines.plain, axis) if low < p < high]
+    fixed = [p for p in _positions(lines.plain, axis) + more[1] if low < p < high]
     return graded_axis(low, high, fine, fineness.growth, fineness.largest_um, fixed)
 
 
@@ -155,17 +165,50 @@ def _extruded(
     cell: UnitCell, layouts: dict[str, Layout], lines: Outlines, depths: NDArray[np.float64], fineness: Fineness
 ) -> Any:
     """Plan-view triangles fitted to both faces' outlines, through the graded depths."""
+    periodic = "x" in cell.periodic_axes, "y" in cell.periodic_axes
+    plan = _stretched(cell, lines, fineness, periodic) or _isotropic(cell, layouts, lines, fineness, periodic)
+    return extrude(plan, depths, periodic_rank(plan, *periodic) if any(periodic) else None)
+
+
+def _stretched(cell: UnitCell, lines: Outlines, fineness: Fineness, periodic: tuple[bool, bool]) -> PlanMesh | None:
+    """A grid bent onto dots, if every oblique outline is a dot's."""
+    dots = find_dots(cell, fineness.circle_corners)
+    ends = _segments(lines.all)
+    straight = np.abs(np.diff(ends, axis=1))[:, 0].min(axis=1) < 1e-9
+    islands = fit_islands(dots, ends[straight], cell.frame.box) if on_dots(ends[~straight], dots) else None
+    if islands is None:
+        return None
+    axes = [plan_axis(cell, axis, lines, fineness, _round(islands, axis, lines, fineness)) for axis in ("x", "y")]
+    return stretched_plan(axes[0], axes[1], islands, periodic)
+
+
+def _round(
+    islands: list[Island], axis: str, lines: Outlines, fineness: Fineness
+) -> tuple[list[tuple[float, float]], list[float]]:
+    """(Position, first step) where an axis is graded towards circles, and positions of other corners."""
+    fine, fixed = [], []
+    steps = (lines.singular, fineness.first_step_um), (lines.mild, MILD * fineness.first_step_um)
+    for island in islands:
+        for radius, sides, corners in island_positions(island, axis):
+            step = next((s for group, s in steps if island.dots.follows(group, radius)), None)
+            fine += [(p, step) for p in sides if step is not None]
+            fixed += corners if step is not None else corners + sides
+    return fine, fixed
+
+
+def _isotropic(
+    cell: UnitCell, layouts: dict[str, Layout], lines: Outlines, fineness: Fineness, periodic: tuple[bool, bool]
+) -> PlanMesh:
+    """Nearly equilateral triangles, for any outlines."""
     from shapely import union_all
 
-    box, groups = cell.frame.box, [g for layout in layouts.values() for g in singular_groups(layout, cell.base.doping_type)]
+    groups = [g for layout in layouts.values() for g in singular_groups(layout, cell.base.doping_type)]
     graded = union_all(lines.singular).buffer(1e-6)
     coarse = [rest for line in lines.mild + lines.plain if (rest := line.difference(graded)).length > 1e-3]
-    periodic = {f"periodic_{axis}": axis in cell.periodic_axes for axis in ("x", "y")}
-    plan = triangulate(
-        groups, box, first_step=fineness.first_step_um, growth=fineness.growth, largest=fineness.largest_um,
-        coarse_lines=coarse, **periodic,
+    return triangulate(
+        groups, cell.frame.box, first_step=fineness.first_step_um, growth=fineness.growth, largest=fineness.largest_um,
+        coarse_lines=coarse, periodic_x=periodic[0], periodic_y=periodic[1],
     )  # fmt: skip
-    return extrude(plan, depths, periodic_rank(plan, *periodic.values()) if cell.periodic_axes else None)
 
 
 def name_surfaces(cells: Any, cell: UnitCell, layouts: dict[str, Layout]) -> dict[str, NDArray[np.int64]]:

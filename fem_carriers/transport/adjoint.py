@@ -12,8 +12,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..errors import Complaints
+from .balance import mass_matrix
 from .coefficients import diffusivity
-from .excess import mass_matrix
 from .linear import Factorization
 from .steady import fixed_weights
 

@@ -89,7 +89,8 @@ class AffineBulk:
         if flux is not None:
             mapped = np.einsum("ckd,dcq->kcq", self._map[0], flux, optimize=True) * self.dx
             local = local + np.einsum("kcq,ikq->ci", mapped, self._reference[1], optimize=True)
-        return _bincount(self.dofs.ravel(), local.ravel(), self.numbering.N)
+        total: NDArray[Any] = _bincount(self.dofs.ravel(), local.ravel(), self.numbering.N)
+        return total
 
     def matrix(self, diffusion: Any, carried: Any = None, slope: Any = None, along: Any = None) -> Any:
         """∫ diffusion ∇u·∇v + u carried·∇v + slope u v + (along·∇u)(along·∇v), sparse (n, n).

@@ -9,7 +9,7 @@ import numpy as np
 
 from ..cell.light import RateFunction, UniformRate
 from ..constants import ELEMENTARY_CHARGE_C
-from ..units import MA
+from ..units import MA, UM
 from .photons import PhotonFlux, photon_flux
 from .spaces import evaluate
 
@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 
     from ..cell.base import Base
     from ..cell.light import Light, Source
+    from .problem import Problem
     from .spaces import Space
 
 
@@ -56,12 +57,13 @@ class LitPlane:
 
 @dataclass(frozen=True)
 class Optics:
-    """Where the photons went, mA/cm² of cell area: incident = shaded + reflected + escaped + generated."""
+    """Where the photons went, mA/cm² of cell area; incident is the sum of the other currents."""
 
     incident: float = 0.0
     shaded: float = 0.0
     reflected: float = 0.0
     escaped: float = 0.0
+    lost_in_layers: float = 0.0
     generated: float = 0.0
     incident_power_mW_per_cm2: float = 0.0
 
@@ -80,34 +82,26 @@ def tangents(inward: NDArray[np.float64]) -> list[NDArray[np.float64]]:
     return [first, np.cross(inward, first)]
 
 
-def assemble_generation(
-    space: Space, light: Light | None, planes: Mapping[str, LitPlane], base: Base, area_cm2: float
-) -> tuple[NDArray[np.float64], Optics]:
+def assemble_generation(problem: Problem) -> tuple[NDArray[np.float64], Optics]:
     """Load vector ∫ G v in 1/s (per cm of depth in 2-D), and where the photons went.
 
     Parameters
     ----------
-    space : Space
-    light : Light or None
-    planes : mapping of {"front", "rear"} to LitPlane
-    base : Base
-        Absorber of the light.
-    area_cm2 : float
-        Cell area the currents refer to.
+    problem : Problem
 
     Returns
     -------
     (n,) array, Optics
     """
-    load, optics = np.zeros(space.size), Optics()
-    for source in light.sources if light is not None else ():
-        plane = planes[source.enters]
+    load, optics = np.zeros(problem.space.size), Optics()
+    for source in problem.light.sources if problem.light is not None else ():
+        plane = problem.lit_planes[source.enters]
         if isinstance(source, UniformRate | RateFunction):
-            part = _rate_load(space, source, plane)
-            current = _current(float(part.sum()), area_cm2)
+            part = _rate_load(problem.space, source, plane)
+            current = _current(float(part.sum()), problem.cell_area_cm2)
             optics += Optics(incident=current, generated=current)
         else:
-            part, share = _beam_load(space, source, plane, base, area_cm2)
+            part, share = _beam_load(problem, source, plane)
             optics += share
         load += part
     return load, optics
@@ -144,14 +138,12 @@ def _rate_load(space: Space, source: Any, plane: LitPlane) -> NDArray[np.float64
     return np.asarray(space.bulk.load(rate=values))
 
 
-def _beam_load(
-    space: Space, source: Source, plane: LitPlane, base: Base, area_cm2: float
-) -> tuple[NDArray[np.float64], Optics]:
+def _beam_load(problem: Problem, source: Source, plane: LitPlane) -> tuple[NDArray[np.float64], Optics]:
     """∫ Φ·∇v − ∮ Φ·ν v for a source that enters through a plane, scaled to its exact entering flux."""
     from skfem import LinearForm
 
-    thickness = float(plane.depth_cm(space.mesh.cells.p).max())
-    flux = photon_flux(source, base, thickness)
+    space = problem.space
+    flux = photon_flux(source, problem.base, float(plane.depth_cm(space.mesh.cells.p).max()))
     region = lit_region(source, plane)
     skin = space.facets(_facing_facets(space, plane))
     photons = _photons(np.asarray(skin.global_coordinates()), plane, region, flux)
@@ -161,7 +153,28 @@ def _beam_load(
     entering = float(-(through * skin.dx)[through < 0].sum())
     lit_cm2 = region.area * 1e-8
     scale = lit_cm2 * float(flux.net(np.zeros(1))[0]) / entering if entering > 0 else 0.0
-    return load * scale, _optics(flux, plane, lit_cm2, float(load.sum()) * scale, area_cm2, source)
+    load, lost = load * scale, _layer_loss(problem, plane, region, flux) * scale
+    budget = _optics(flux, plane, lit_cm2, float(load.sum()), float(lost.sum()), problem.cell_area_cm2, source)
+    return load - lost, budget
+
+
+def _layer_loss(problem: Problem, plane: LitPlane, region: Any, flux: PhotonFlux) -> NDArray[np.float64]:
+    """∮ (1 − collection) [Φ(0) − Φ(depth)] v over layers that absorb: carriers generated and lost in the layer."""
+    from skfem import LinearForm
+
+    total = np.zeros(problem.space.size)
+    for name, surface in problem.surfaces.items():
+        layer = surface.layer
+        if layer is None or layer.absorbing_depth_um == 0 or layer.collection == 1:
+            continue
+        basis = problem.space.surfaces[name]
+        x = np.asarray(basis.global_coordinates())
+        if np.abs(plane.depth_cm(x)).max() > 1e-6 * np.ptp(problem.mesh.cells.p):
+            continue  # on another face than the light enters
+        ends = flux.net(np.array([0.0, layer.absorbing_depth_um * UM]))
+        lost = (1 - layer.collection) * (ends[0] - ends[1]) * inside(region, *plane.plane_um(x))
+        total += LinearForm(lambda v, w: w.lost * v).assemble(basis, lost=lost)
+    return total
 
 
 def _photons(x: Any, plane: LitPlane, region: Any, flux: PhotonFlux) -> Any:
@@ -178,7 +191,7 @@ def _facing_facets(space: Space, plane: LitPlane) -> NDArray[np.int64]:
 
 
 def _optics(
-    flux: PhotonFlux, plane: LitPlane, lit_cm2: float, generated: float, area_cm2: float, source: Source
+    flux: PhotonFlux, plane: LitPlane, lit_cm2: float, absorbed: float, lost: float, area_cm2: float, source: Source
 ) -> Optics:
     """Photon budget of one beam; light outside of a mask never reaches the cell and is not counted as incident."""
     region_cm2 = _inside_mask(source, plane, plane.total).area * 1e-8
@@ -188,8 +201,9 @@ def _optics(
         incident=_current(incident, area_cm2),
         shaded=_current(incident - into, area_cm2),
         reflected=_current(reflected, area_cm2),
-        escaped=_current(into - reflected - generated, area_cm2),
-        generated=_current(generated, area_cm2),
+        escaped=_current(into - reflected - absorbed, area_cm2),
+        lost_in_layers=_current(lost, area_cm2),
+        generated=_current(absorbed - lost, area_cm2),
         incident_power_mW_per_cm2=flux.power_mW_per_cm2 * region_cm2 / area_cm2,
     )
 

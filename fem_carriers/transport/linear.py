@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from copy import copy
+from functools import cache
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -22,6 +24,8 @@ class Factorization:
     Parameters
     ----------
     matrix : scipy sparse matrix, shape (n, n)
+    scale : bool
+        False if the caller has scaled the matrix.
 
     Raises
     ------
@@ -29,14 +33,14 @@ class Factorization:
         "singular" if the matrix has no inverse.
     """
 
-    def __init__(self, matrix: Any) -> None:
+    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
         import scipy.sparse as sp
 
         self._matrix = sp.csr_matrix(matrix)
-        scale = np.sqrt(np.abs(self._matrix.diagonal()))
+        size = np.sqrt(np.abs(self._matrix.diagonal())) if scale else np.ones(self._matrix.shape[0])
         if not np.all(np.isfinite(self._matrix.data)):
             raise SolverError("not a number", "The equations contain NaN or infinite entries; check functions given.")
-        self._scale = 1 / np.where(scale > 0, scale, 1.0)
+        self._scale = 1 / np.where(size > 0, size, 1.0)
         scaled = sp.diags(self._scale) @ self._matrix @ sp.diags(self._scale)
         self._solver = _pardiso(scaled) or _superlu(scaled)
 
@@ -75,32 +79,45 @@ class Factorization:
     ) -> None:
         self._solver.free()
 
+    def __del__(self) -> None:
+        if hasattr(self, "_solver"):
+            self._solver.free()
+
+
+@cache
+def _pardiso_library() -> Any:
+    """A solver to copy: finding the library on disk takes longer than solving a small problem."""
+    from pypardiso import PyPardisoSolver
+
+    return PyPardisoSolver(mtype=11)
+
 
 class _Pardiso:
-    def __init__(self, matrix: Any) -> None:
-        from pypardiso import PyPardisoSolver
-
-        self._matrix, self._solver = matrix, PyPardisoSolver(mtype=11)
+    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
+        self._matrix, self._solver = matrix, copy(_pardiso_library())
+        self._solver.pt, self._solver.iparm = np.zeros_like(self._solver.pt), np.zeros_like(self._solver.iparm)
         self._solver.factorize(matrix)
 
     def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
         return np.asarray(self._solver.solve(self._matrix, right))
 
     def free(self) -> None:
-        self._solver.free_memory(everything=True)
+        if self._matrix is not None:
+            self._solver.free_memory(everything=True)
+            self._matrix = None
 
 
 class _SuperLU:
-    def __init__(self, matrix: Any) -> None:
+    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
         from scipy.sparse.linalg import splu
 
-        self._lu = splu(matrix.tocsc())
+        self._lu: Any = splu(matrix.tocsc())
 
     def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
         return np.asarray(self._lu.solve(right))
 
     def free(self) -> None:
-        del self._lu
+        self._lu = None
 
 
 def _pardiso(matrix: Any) -> Any:

@@ -63,18 +63,16 @@ class ExcessState:
     constraints : Constraints
     dn : (n,) array
         Δn at the nodes, cm⁻³.
+    residual : (n,) array
+        F(Δn), 1/s: round-off at free unknowns, minus the leaving current at fixed ones.
     outcome : Outcome
     """
 
     system: ExcessSystem
     constraints: Constraints
     dn: NDArray[np.float64]
+    residual: NDArray[np.float64]
     outcome: Outcome
-
-    @cached_property
-    def residual(self) -> NDArray[np.float64]:
-        """F(Δn), 1/s: round-off at free unknowns, minus the leaving current at fixed ones."""
-        return np.asarray(self.system.residual(self.dn))
 
     def leaving(self) -> dict[tuple[str, str], float]:
         """Carriers per second that leave where Δn is fixed, keyed by ("terminal", name) or ("surface", name).
@@ -202,33 +200,35 @@ def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0
     InputError, SolverError
     """
     constraints = constrain(system.problem, voltage_V)
-    spread, values = constraints.spread, constraints.values
-    start = _start(system, constraints)
-    if spread.shape[1] == 0:
-        dn, outcome = values.copy(), Outcome("converged", 0, 0.0)
-        return ExcessState(system, constraints, dn, outcome)
-    free, outcome = newton(
-        lambda y: spread.T @ system.residual(spread @ y + values),
-        lambda y: spread.T @ system.jacobian(spread @ y + values) @ spread,
-        start,
-        lambda y: _throughput(system, constraints, spread @ y + values),
-    )
-    return ExcessState(system, constraints, spread @ free + values, outcome)
+    spread, level = constraints.spread, _level(system, constraints)
+    fixed = np.where(constraints.fixed, constraints.values - level, 0.0)
+    free, outcome = np.zeros(spread.shape[1]), Outcome("converged", 0, 0.0)
+    if free.size:
+        free, outcome = newton(
+            lambda y: spread.T @ system.residual(spread @ y + fixed, level),
+            lambda y: spread.T @ system.jacobian(spread @ y + fixed + level) @ spread,
+            free,
+            lambda y: _throughput(system, constraints, spread @ y + fixed, level),
+        )
+    above = spread @ free + fixed
+    return ExcessState(system, constraints, above + level, system.residual(above, level), outcome)
 
 
-def _throughput(system: ExcessSystem, constraints: Constraints, dn: NDArray[np.float64]) -> float:
-    """The larger of generation and total recombination, 1/s, at an iterate."""
+def _throughput(system: ExcessSystem, constraints: Constraints, above: NDArray[np.float64], level: float) -> float:
+    """The larger of generation and total recombination, 1/s, at an iterate; what passes through if there is neither."""
+    dn = above + level
     rates = [*system.bulk_rates(dn).values(), *system.surface_rates(dn).values()]
-    fixed = np.abs(system.residual(dn)[constraints.fixed]).sum() if not rates and not system.load.any() else 0.0
-    return max(float(np.abs(system.load).sum()), float(np.abs(rates).sum()), float(fixed))
+    if not rates and not system.load.any():
+        return float(np.abs(system.residual(above, level)[constraints.fixed]).sum())
+    return max(float(np.abs(system.load).sum()), float(np.abs(rates).sum()))
 
 
-def _start(system: ExcessSystem, constraints: Constraints) -> NDArray[np.float64]:
-    """Zero where something is fixed; else the uniform density at which recombination balances generation."""
-    size = constraints.spread.shape[1]
+def _level(system: ExcessSystem, constraints: Constraints) -> float:
+    """Uniform density to start from: the largest one fixed, else where recombination balances generation."""
     if constraints.fixed.any():
-        return np.zeros(size)
-    return np.full(size, uniform_density(system))
+        values = constraints.values[constraints.fixed]
+        return float(values[np.abs(values).argmax()])
+    return uniform_density(system)
 
 
 def uniform_density(system: ExcessSystem) -> float:

@@ -1,0 +1,165 @@
+"""Solve the bipolar form at given terminal conditions; the solution and its numbers."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from ..constants import ELEMENTARY_CHARGE_C
+from ..errors import Complaints
+from ..transport.bipolar import BipolarSystem
+from ..transport.bipolar_newton import BipolarState
+from ..transport.walk import Walker, implied_voltage_V
+from ..units import MA
+from .ledger import make_ledger
+from .losses import Losses, make_losses, node_splitting
+from .solution import Solution
+from .terminals import Through, settle
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from ..transport.problem import Problem
+
+Condition = float | str | Through
+"""A voltage in V, "floating", or through a resistance."""
+
+
+@dataclass(frozen=True, eq=False, repr=False)
+class BipolarSolution(Solution):
+    """A solution of the bipolar form; everything of `Solution`, and terminal currents, potentials, losses."""
+
+    @property
+    def voltage_V(self) -> Mapping[str, float]:
+        """Voltage of every terminal."""
+        return self.state.voltages_V
+
+    @property
+    def current_mA_per_cm2(self) -> Mapping[str, float]:
+        """Conventional current that leaves the cell at every terminal; they sum to zero."""
+        return {t: i / self.problem.cell_area_cm2 / MA for t, i in self.state.currents_A.items()}
+
+    @property
+    def collected_mA_per_cm2(self) -> Mapping[str, float]:
+        """Carriers collected by every terminal, positive under light: holes or electrons, as the terminal takes."""
+        holes = self.state.system.conductors.hole_terminals
+        return {t: j if t in holes else -j for t, j in self.current_mA_per_cm2.items()}
+
+    @property
+    def cell_current_mA_per_cm2(self) -> float:
+        """Current out of the hole-collecting terminals; photocurrent positive."""
+        return sum(self.current_mA_per_cm2[t] for t in self.state.system.conductors.hole_terminals)
+
+    @property
+    def cell_voltage_V(self) -> float:
+        """Voltage of the hole-collecting over the electron-collecting terminal (the first of each by name)."""
+        conductors = self.state.system.conductors
+        pair = (conductors.majority_reference, next(iter(conductors.minority_terminals), None))
+        if None in pair:
+            return self.implied_voltage_V
+        majority, minority = (self.voltage_V[str(t)] for t in pair)
+        return (majority - minority) * self.state.system.roles.sign
+
+    @property
+    def power_mW_per_cm2(self) -> float:
+        """Power out of all terminals."""
+        return sum(self.voltage_V[t] * j for t, j in self.current_mA_per_cm2.items())
+
+    @cached_property
+    def implied_voltage_V(self) -> float:
+        """VT ln(np/ni²) at the mean excess density of the base."""
+        bulk, roles = self.problem.space.bulk, self.state.system.roles
+        mean = float((bulk.values(self.state.dn) * bulk.dx).sum() / bulk.dx.sum())
+        return float(roles.splitting(mean))
+
+    @cached_property
+    def losses(self) -> Losses:
+        """Loss budget in mW/cm²."""
+        return make_losses(self.state, self.cell_current_mA_per_cm2)
+
+    @cached_property
+    def nodal_fields(self) -> dict[str, NDArray[np.float64]]:
+        """Fields at the nodes as for `Solution`, and the quasi-Fermi potentials in V."""
+        from .fields import nodal_fields
+
+        fields = nodal_fields(self.state)
+        sign, split = self.state.system.roles.sign, node_splitting(self.state)
+        reference = self.state.system.conductors.majority_reference
+        majority = sign * (self.state.x.f + self.state.voltages.get(reference or "", 0.0))
+        minority = majority - sign * split
+        hole, electron = (majority, minority) if sign > 0 else (minority, majority)
+        return fields | {
+            "quasi_fermi_splitting_V": split,
+            "electron_quasi_fermi_potential_V": electron,
+            "hole_quasi_fermi_potential_V": hole,
+        }
+
+    @cached_property
+    def currents_mA_per_cm2(self) -> dict[str, NDArray[np.float64]]:
+        """Electron and hole current density as cell averages, each (dimension, n_cells), mA/cm²."""
+        system = self.state.system
+        dx = system.space.bulk.dx
+        scale = system.roles.sign * ELEMENTARY_CHARGE_C / MA
+        mean = [scale * (j * dx).sum(axis=-1) / dx.sum(axis=-1) for j in system.fluxes(self.state.x)]
+        names = ("electron", "hole") if system.roles.sign > 0 else ("hole", "electron")
+        return dict(zip(names, mean, strict=True))
+
+    @property
+    def carrier_flux_mA_per_cm2(self) -> NDArray[np.float64]:
+        """The minority current as a flux towards sinks (positive along the way of the carriers)."""
+        sign = self.state.system.roles.sign
+        return -sign * self.currents_mA_per_cm2["electron" if sign > 0 else "hole"]
+
+
+def solve_bipolar(problem: Problem, voltage_V: float | Mapping[str, Condition] = 0.0) -> BipolarSolution:
+    """Solve the bipolar form: Δn and the majority potential, layers as sheets, contacts and terminals.
+
+    Parameters
+    ----------
+    problem : Problem
+    voltage_V : float, or mapping of terminal to float, "floating" or Through
+        A number is the voltage of all hole-collecting over all electron-collecting terminals, positive in forward
+        bias. In a mapping every terminal is named; "floating" carries no current, ``Through(resistance_ohm_cm2,
+        voltage_V)`` connects through a resistance (per cell area).
+
+    Returns
+    -------
+    BipolarSolution
+
+    Raises
+    ------
+    InputError
+        A layout without a finite answer, or terminals that are not there.
+    SolverError
+        "majority carriers exhausted", "not converged", "no sink for carriers".
+    BalanceError
+        The carrier ledger does not close.
+    """
+    walker = Walker(BipolarSystem(problem))
+    if isinstance(voltage_V, Mapping):
+        return wrap(settle(walker, voltage_V))
+    good = isinstance(voltage_V, int | float) and math.isfinite(voltage_V)
+    problems = Complaints("solve_bipolar")
+    problems.unless(good, f"voltage_V = {voltage_V!r}", "a finite number, or a mapping of terminals")
+    problems.raise_if_any()
+    return wrap(walker.at(bias_voltages(walker.system, float(voltage_V))))
+
+
+def bias_voltages(system: BipolarSystem, voltage_V: float) -> dict[str, float]:
+    """Hole terminals at the forward bias, electron terminals at 0; in the frame of a p-type base."""
+    conductors, sign = system.conductors, system.roles.sign
+    terminals = conductors.majority_terminals + conductors.minority_terminals
+    return {t: sign * voltage_V if t in conductors.hole_terminals else 0.0 for t in terminals}
+
+
+def wrap(state: BipolarState) -> BipolarSolution:
+    """Close the ledger of a state and wrap it up."""
+    return BipolarSolution(state=state, ledger=make_ledger(state), warnings=())
+
+
+__all__ = ["BipolarSolution", "Condition", "Through", "bias_voltages", "implied_voltage_V", "solve_bipolar", "wrap"]

@@ -1,0 +1,291 @@
+"""Plots of sweeps, lines and lateral losses."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..errors import Complaints
+from ..files.atomic import target, write_atomically
+from .labels import label, split_name, words
+from .style import DARK, OKABE_ITO, log_by_default
+
+if TYPE_CHECKING:
+    import pandas as pd
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+    from numpy.typing import NDArray
+
+FLAT_SHARE = 0.005
+"""The optimum counts as flat where the result stays within this share of the best."""
+CURRENT = "_mA_per_cm2"
+OPTICAL = ("shaded", "reflected", "escaped")
+COORDINATES = ("distance_um", "x_um", "y_um", "z_um")
+PICTURES = (".png", ".pdf", ".svg")
+_LOOK: Any = {
+    "font.size": 10, "axes.labelsize": 10.5, "axes.spines.top": False, "axes.spines.right": False,
+    "axes.grid": True, "grid.alpha": 0.25, "grid.linewidth": 0.6, "axes.axisbelow": True,
+    "axes.formatter.use_mathtext": True,
+    "legend.frameon": False, "legend.fontsize": 9, "axes.edgecolor": DARK, "lines.linewidth": 1.8,
+}  # fmt: skip
+
+
+def plot_sweep(
+    table: pd.DataFrame, x: str = "pitch_um", picture: str | Path | None = None, *, y: str | None = None
+) -> Figure:
+    """Collected current against a variable, and below it where the rest went.
+
+    The best point is marked, and the range in which the result stays within 0.5 % of it (linear between points) is
+    shaded. The losses are stacked: light not absorbed (shaded, reflected, escaped) and carriers lost
+    (columns ``lost_…_mA_per_cm2``). Rows without a result are marked by crosses at the lower edge.
+
+    Parameters
+    ----------
+    table : pandas.DataFrame
+        Of a sweep: one row per point.
+    x : str
+        Column of the variable.
+    picture : str or Path, optional
+        File to save to: .png, .pdf or .svg.
+    y : str, optional
+        Column to judge by; default is the sum of the columns ``collected_…_mA_per_cm2``.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    InputError
+        A missing or non-numeric column, no result at all, or a picture that cannot be written.
+    """
+    table = table.reset_index() if x in table.index.names else table
+    _check_columns("plot_sweep", table, [x] if y is None else [x, y])
+    table = table.sort_values(x)
+    at = table[x].to_numpy(dtype=float)
+    value, axis_label, unit = _judged(table, y)
+    good = np.isfinite(value) & np.isfinite(at)
+    _need("plot_sweep", bool(good.any()), "a table without a single finite result", "one or more results")
+    losses = _loss_columns(table)
+    figure, axes = _figure(2 if losses else 1, (7.2, 6.6 if losses else 3.9), ratios=(1.0, 1.15)[: 2 if losses else 1])
+    _draw_best(axes[0], at[good], value[good], (split_name(x)[1], unit))
+    axes[0].plot(at[~good], np.zeros((~good).sum()), "x", color=DARK, transform=axes[0].get_xaxis_transform(),
+                 clip_on=False, label="no result" if (~good).any() else None)  # fmt: skip
+    axes[0].set_ylabel(axis_label)
+    if losses:
+        _draw_losses(axes[1], at[good], table[good], losses)
+        axes[1].set_ylabel("losses (mA/cm²)")
+    axes[-1].set_xlabel(label(x))
+    for ax in axes:
+        _legend_beside(ax)
+    return _finish(figure, picture)
+
+
+def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], str, str]:
+    """Values, axis label and unit of what the sweep is judged by."""
+    if y is not None:
+        return table[y].to_numpy(dtype=float), label(y), split_name(y)[1]
+    collected = [c for c in table if str(c).startswith("collected_") and str(c).endswith(CURRENT)]
+    known = ", ".join(map(str, table.columns))
+    _need("plot_sweep", bool(collected), f"columns {known}", "collected_…_mA_per_cm2, or y= a column to judge by")
+    total = table[collected].to_numpy(dtype=float).sum(axis=1)
+    return total, label(str(collected[0])) if len(collected) == 1 else "collected (mA/cm²)", "mA/cm²"
+
+
+def _loss_columns(table: pd.DataFrame) -> list[str]:
+    """Optical losses first, then carriers; columns that are zero throughout are left out."""
+    lost = [str(c) for c in table if str(c).startswith("lost_") and str(c).endswith(CURRENT)]
+    columns = [f"{o}{CURRENT}" for o in OPTICAL if f"{o}{CURRENT}" in table] + lost
+    top = max((float(table[c].max()) for c in columns), default=0.0)
+    return [c for c in columns if float(table[c].max()) > 1e-6 * top]
+
+
+def flat_range(x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[float, float]:
+    """Range of rising `x` around the largest `y` in which y, linear between points, is within 0.5 % of it."""
+    best = int(np.argmax(y))
+    level = y[best] - FLAT_SHARE * abs(y[best])
+
+    def end(step: int) -> float:
+        i = best
+        while 0 <= i + step < len(x) and y[i + step] >= level:
+            i += step
+        j = i + step
+        if not 0 <= j < len(x):
+            return float(x[i])
+        return float(x[i] + (x[j] - x[i]) * (y[i] - level) / (y[i] - y[j]))
+
+    return end(-1), end(1)
+
+
+def _draw_best(ax: Axes, x: NDArray[np.float64], y: NDArray[np.float64], units: tuple[str, str]) -> None:
+    best = int(np.argmax(y))
+    low, high = flat_range(x, y)
+    ax.axvspan(
+        low,
+        high,
+        color=OKABE_ITO[4],
+        alpha=0.22,
+        linewidth=0,
+        label=f"within 0.5 %:\n{low:.4g} to {high:.4g} {units[0]}",
+    )
+    ax.plot(x, y, "-o", color=OKABE_ITO[0], markersize=4)
+    ax.plot(
+        x[best],
+        y[best],
+        "D",
+        color=OKABE_ITO[5],
+        markersize=8,
+        label=f"best: {y[best]:.4g} {units[1]}\nat {x[best]:.4g} {units[0]}",
+    )
+    ax.margins(y=0.12)
+
+
+def _draw_losses(ax: Axes, x: NDArray[np.float64], table: pd.DataFrame, columns: list[str]) -> None:
+    """Stacked areas (one bar for a single point); beyond the colours at hand the smallest are taken together."""
+    series = {c: table[c].fillna(0.0).to_numpy(dtype=float) for c in columns}
+    room = len(OKABE_ITO)
+    if len(series) > room:
+        small = sorted(series, key=lambda c: float(series[c].max()))[: len(series) - room + 1]
+        rest = np.sum([series.pop(c) for c in small], axis=0)
+        series["other"] = rest
+    names = [_loss_name(c) for c in series]
+    colors = OKABE_ITO[: len(series)]
+    if len(x) == 1:
+        bottoms = np.cumsum([0.0, *(float(v[0]) for v in series.values())])
+        for (values, name, color), bottom in zip(
+            zip(series.values(), names, colors, strict=True), bottoms, strict=False
+        ):
+            ax.bar(x, values, width=0.2 * abs(x[0]) or 0.2, bottom=bottom, color=color, label=name)
+    else:
+        ax.stackplot(x, *series.values(), labels=names, colors=colors, edgecolor="white", linewidth=0.6)
+    ax.set_ylim(bottom=0)
+
+
+def _loss_name(column: str) -> str:
+    text = split_name(column.removeprefix("lost_"))[0]
+    return {"shaded": "shading", "reflected": "reflection", "escaped": "escaped light"}.get(text, text)
+
+
+def plot_line(table: pd.DataFrame, log: bool | None = None, picture: str | Path | None = None) -> Figure:
+    """Fields along a line.
+
+    Parameters
+    ----------
+    table : pandas.DataFrame
+        From `Solution.along_line`, or several joined: ``distance_um`` and one or more fields of one unit.
+    log : bool, optional
+        Logarithmic axis; default for densities and rates that span more than two decades.
+    picture : str or Path, optional
+        File to save to: .png, .pdf or .svg.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    InputError
+        No ``distance_um``, or no field.
+    """
+    _check_columns("plot_line", table, ["distance_um"])
+    fields = [str(c) for c in table if c not in COORDINATES]
+    _need("plot_line", bool(fields), f"columns {', '.join(map(str, table))}", "distance_um and a field")
+    _check_columns("plot_line", table, fields)
+    values = table[fields].to_numpy(dtype=float)
+    log = any(log_by_default(f, table[f].to_numpy(dtype=float)) for f in fields) if log is None else log
+    figure, axes = _figure(1, (6.4, 4.0))
+    for i, field in enumerate(fields):
+        shown = np.where(values[:, i] > 0, values[:, i], np.nan) if log else values[:, i]
+        axes[0].plot(table["distance_um"], shown, color=OKABE_ITO[i % len(OKABE_ITO)], label=words(field))
+    axes[0].set_yscale("log" if log else "linear")
+    axes[0].set_xlabel("distance along the line (µm)")
+    unit = label(fields[0]).removeprefix(words(fields[0])).strip()
+    axes[0].set_ylabel(label(fields[0]) if len(fields) == 1 else unit.strip("()"))
+    if len(fields) > 1:
+        _legend_beside(axes[0])
+    return _finish(figure, picture)
+
+
+def plot_lateral_losses(table: pd.DataFrame, picture: str | Path | None = None) -> Figure:
+    """Generation, collection and losses against the distance from the contact, as steps over the bins.
+
+    Parameters
+    ----------
+    table : pandas.DataFrame
+        From `lateral_losses`: bins and currents per bin.
+    picture : str or Path, optional
+        File to save to: .png, .pdf or .svg.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    InputError
+        A missing column.
+    """
+    bins = ["distance_from_um", "distance_to_um"]
+    groups = (["generated", "collected"], ["lost_in_bulk", "lost_at_surfaces"])
+    _check_columns("plot_lateral_losses", table, [*bins, *(g + CURRENT for group in groups for g in group)])
+    edges = np.append(table[bins[0]].to_numpy(dtype=float), float(table[bins[1]].iloc[-1]))
+    figure, axes = _figure(2, (7.2, 5.6), ratios=(1.0, 1.0))
+    styles = iter(zip(OKABE_ITO[1::-1] + OKABE_ITO[5:6] + OKABE_ITO[2:3], ("-", "-", "-", "--"), strict=True))
+    for ax, group in zip(axes, groups, strict=True):
+        for name in group:
+            color, style = next(styles)
+            values = table[name + CURRENT].to_numpy(dtype=float)
+            ax.stairs(values, edges, baseline=None, color=color, linestyle=style, linewidth=2, label=words(name))
+        low, high = ax.dataLim.intervaly
+        ax.set_ylim(min(0.0, 1.05 * low), 1.08 * high or 1.0)
+        ax.set_xlim(edges[0], edges[-1])
+        ax.set_ylabel("per bin (mA/cm² of cell)")
+        _legend_beside(ax)
+    axes[-1].set_xlabel("distance from the contact (µm)")
+    return _finish(figure, picture)
+
+
+def _need(what: str, condition: bool, given: str, allowed: str) -> None:
+    problems = Complaints(what)
+    problems.unless(condition, given, allowed)
+    problems.raise_if_any()
+
+
+def _check_columns(what: str, table: pd.DataFrame, names: list[str]) -> None:
+    from pandas.api.types import is_numeric_dtype
+
+    problems = Complaints(what)
+    for name in names:
+        known = ", ".join(map(str, table.columns))
+        if problems.unless(name in table, f"no column {name!r}", f"one of {known}"):
+            problems.unless(is_numeric_dtype(table[name]), f"column {name!r} of {table[name].dtype}", "numbers")
+    problems.unless(len(table) > 0, "an empty table", "one or more rows")
+    problems.raise_if_any()
+
+
+def _figure(rows: int, size: tuple[float, float], ratios: tuple[float, ...] | None = None) -> tuple[Figure, list[Axes]]:
+    """A figure with its own canvas, so that nothing is registered globally."""
+    import matplotlib
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    with matplotlib.rc_context(_LOOK):
+        figure = Figure(figsize=size, layout="constrained")
+        FigureCanvasAgg(figure)
+        axes = figure.subplots(rows, 1, sharex=True, squeeze=False, height_ratios=ratios)
+    return figure, list(axes[:, 0])
+
+
+def _legend_beside(ax: Axes) -> None:
+    """Legend to the right of the axes, in the order in which areas are stacked (top first)."""
+    handles, names = ax.get_legend_handles_labels()
+    ax.legend(handles[::-1], names[::-1], loc="upper left", bbox_to_anchor=(1.01, 1.0), frameon=False, fontsize=9)
+
+
+def _finish(figure: Figure, picture: Any) -> Figure:
+    if picture is not None:
+        path = target("picture", picture, PICTURES)
+        write_atomically(path, lambda p: figure.savefig(p, dpi=150))
+    return figure

@@ -1,0 +1,123 @@
+"""From a solution to the columns of a table."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+from ..errors import Complaints
+
+if TYPE_CHECKING:
+    from ..analysis.ledger import Ledger
+    from ..analysis.solution import Solution
+    from ..cell.unit_cell import UnitCell
+
+TERMINAL_VALUES = ("cell_current_mA_per_cm2", "cell_voltage_V", "power_mW_per_cm2")
+
+
+def collected_current(
+    cell: UnitCell, first_step_um: float | None = None, growth: float | None = None
+) -> dict[str, float]:
+    """Mesh a cell, solve the excess-carrier form at 0 V, and say where photons and carriers went.
+
+    Parameters
+    ----------
+    cell : UnitCell
+    first_step_um, growth : float, optional
+        Of the mesh; as for `problem`.
+
+    Returns
+    -------
+    dict of str to float
+        See `solution_columns`.
+
+    Raises
+    ------
+    InputError, MeshError, SolverError
+    """
+    from ..analysis.solve import solve_excess
+    from ..transport.build import problem
+
+    return solution_columns(solve_excess(problem(cell, first_step_um=first_step_um, growth=growth)))
+
+
+def solution_columns(solution: Solution) -> dict[str, float]:
+    """Headline numbers of a solution by column name.
+
+    incident = shaded + reflected + escaped + generated, generated = Σ collected + Σ lost; all in mA/cm² of cell area.
+
+    Parameters
+    ----------
+    solution : Solution
+
+    Returns
+    -------
+    dict of str to float
+        Light; collected per terminal; lost per bulk channel (``lost_base_Auger_mA_per_cm2``) and surface
+        (``lost_front_finger_mA_per_cm2``); collection efficiency, injection ratio, unknowns, ledger residual.
+    """
+    ledger, optics = solution.ledger, solution.optics
+    columns = {f"{name}_mA_per_cm2": getattr(optics, name) for name in ("incident", "shaded", "reflected", "escaped")}
+    columns |= {"generated_mA_per_cm2": ledger.generated_mA_per_cm2} | _ledger_columns(ledger)
+    collected = sum(v for (kind, _), v in ledger.rows.items() if kind == "terminal")
+    generated = ledger.generated_mA_per_cm2
+    columns["collection_efficiency_percent"] = 100 * collected / generated if generated > 0 else math.nan
+    columns |= {name: getattr(solution, name) for name in TERMINAL_VALUES if hasattr(solution, name)}
+    return columns | {
+        "injection_ratio": solution.injection_ratio,
+        "unknowns": solution.problem.space.size,
+        "ledger_residual": ledger.relative_residual,
+    }
+
+
+def _ledger_columns(ledger: Ledger) -> dict[str, float]:
+    order = {"terminal": 0, "bulk": 1, "surface": 2}
+    rows = sorted(ledger.rows.items(), key=lambda row: order.get(row[0][0], 3))
+    words = {kind: "collected" if kind == "terminal" else "lost" for (kind, _), _ in rows}
+    return {f"{words[kind]}_{_plain(name)}_mA_per_cm2": value for (kind, name), value in rows}
+
+
+def _plain(name: str) -> str:
+    """A name fit for a column: "base: Auger" → "base_Auger"."""
+    return re.sub(r"\W+", "_", name).strip("_")
+
+
+def result_columns(result: Any) -> dict[str, float]:
+    """Numbers of whatever a computation returned.
+
+    Parameters
+    ----------
+    result : mapping of str to number, Solution, or anything with a ``summary``
+
+    Returns
+    -------
+    dict of str to float
+
+    Raises
+    ------
+    InputError
+        Nothing of these, or an entry that is not a number.
+    """
+    if hasattr(result, "ledger") and hasattr(result, "optics"):
+        return solution_columns(result)
+    numbers = result if isinstance(result, Mapping) else getattr(result, "summary", None)
+    problems = Complaints("compute")
+    if not problems.unless(hasattr(numbers, "items"), f"a result of type {type(result).__name__}", _ALLOWED):
+        problems.raise_if_any()
+    columns = {str(name): _number(value) for name, value in numbers.items()}  # type: ignore[union-attr]
+    for name, value in columns.items():
+        problems.unless(value is not None, f"a result {name!r} that is not a number", _ALLOWED)
+    problems.raise_if_any()
+    return columns  # type: ignore[return-value]
+
+
+_ALLOWED = "a mapping of names to numbers, a solution, or an object with a summary"
+
+
+def _number(value: Any) -> float | None:
+    try:
+        return value if isinstance(value, int | float) else float(value)
+    except (TypeError, ValueError):
+        return None

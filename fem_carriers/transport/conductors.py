@@ -1,0 +1,232 @@
+"""Sheets, contacts and terminals of the bipolar form: which potential they act on, and their assembled matrices."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..constants import ELEMENTARY_CHARGE_C
+from ..errors import Complaints
+from ..units import MOHM
+from .ties import Junction, find_junctions, periodic_map
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from numpy.typing import NDArray
+
+    from ..cell.surface import Surface
+    from .problem import Problem
+
+
+@dataclass(frozen=True)
+class Metal:
+    """One contacted surface.
+
+    Parameters
+    ----------
+    surface, terminal : str
+    on_layer : bool
+        True if it touches an opposite-type layer (acts on the layer's potential), False if it acts on the base's
+        majority carriers, directly or through a layer of the base's type.
+    reference : str
+        The terminal to which the potential here is stored relative.
+    resistivity_ohm_cm2 : float
+        0 for an ideal contact.
+    dofs : int array
+    mass : sparse matrix (n, n)
+        ∫ u v over the contact.
+    load : (n,) array
+        ∫ v over the contact.
+    """
+
+    surface: str
+    terminal: str
+    on_layer: bool
+    reference: str
+    resistivity_ohm_cm2: float
+    dofs: NDArray[np.int64]
+    mass: Any
+    load: NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
+class Conductors:
+    """Sheets, contacts and terminals of a problem.
+
+    Parameters
+    ----------
+    problem : Problem
+    """
+
+    problem: Problem
+
+    @cached_property
+    def partner(self) -> NDArray[np.int64]:
+        """Periodic partner of every unknown."""
+        return periodic_map(self.problem.space, self.problem.periodic_axes)
+
+    @cached_property
+    def junctions(self) -> list[Junction]:
+        """Connected opposite-type layers."""
+        return find_junctions(self.problem, self.partner)
+
+    @cached_property
+    def layer(self) -> NDArray[np.bool_]:
+        """Unknowns on opposite-type layers, shape (n,)."""
+        on = np.zeros(self.problem.space.size, dtype=bool)
+        for junction in self.junctions:
+            on[junction.dofs] = True
+        return on
+
+    @cached_property
+    def bare(self) -> NDArray[np.bool_]:
+        """Unknowns on bare metal, Δn = 0, shape (n,)."""
+        on = np.zeros(self.problem.space.size, dtype=bool)
+        for name, surface in self.problem.surfaces.items():
+            if surface.pins_to_zero:
+                on[self.problem.space.facet_dofs(self.problem.mesh.surfaces[name])] = True
+        return on
+
+    @cached_property
+    def sheets(self) -> dict[str, tuple[bool, Any]]:
+        """(acts on layer potential, ∫ ∇s u·∇s v / R_sh in 1/Ω) of every conducting layer."""
+        found = {}
+        for name, surface in self.problem.surfaces.items():
+            if surface.layer is not None and np.isfinite(surface.layer.sheet_resistance_ohm_per_sq):
+                stiffness = sheet_stiffness(self.problem.space.surfaces[name])
+                opposite = surface.is_junction(self.problem.base.doping_type)
+                found[name] = (opposite, stiffness / surface.layer.sheet_resistance_ohm_per_sq)
+        return found
+
+    @cached_property
+    def shunts(self) -> dict[str, Any]:
+        """∫ u v / r_shunt in 1/Ω of every shunted junction surface."""
+        return {
+            name: mass_of(self.problem.space.surfaces[name]) / surface.shunt_ohm_cm2
+            for name, surface in self.problem.surfaces.items()
+            if surface.shunt_ohm_cm2 is not None and surface.is_junction(self.problem.base.doping_type)
+        }
+
+    @cached_property
+    def metals(self) -> list[Metal]:
+        """All contacts."""
+        found = []
+        for name, surface in self.problem.surfaces.items():
+            if surface.contact is not None:
+                found.append(self._metal(name, surface))
+        return found
+
+    def _metal(self, name: str, surface: Surface) -> Metal:
+        assert surface.contact is not None
+        basis = self.problem.space.surfaces[name]
+        mass = mass_of(basis)
+        opposite = surface.is_junction(self.problem.base.doping_type)
+        terminal = surface.contact.terminal
+        reference = self._layer_reference(name) if opposite else self.majority_reference
+        rho = surface.contact.contact_resistivity_mohm_cm2 * MOHM
+        dofs = self.problem.space.facet_dofs(self.problem.mesh.surfaces[name])
+        load = np.asarray(mass.sum(axis=1)).ravel()
+        return Metal(name, terminal, opposite, reference or terminal, rho, dofs, mass, load)
+
+    def _layer_reference(self, name: str) -> str | None:
+        return next((j.terminal for j in self.junctions if name in j.surfaces), None)
+
+    @cached_property
+    def majority_reference(self) -> str | None:
+        """Terminal to which the majority potential is stored relative; None if no metal reaches the majority."""
+        names = sorted(
+            s.contact.terminal
+            for s in self.problem.surfaces.values()
+            if s.contact is not None and not s.is_junction(self.problem.base.doping_type)
+        )
+        return names[0] if names else None
+
+    @cached_property
+    def minority_terminals(self) -> list[str]:
+        """Terminals on opposite-type layers."""
+        return sorted({m.terminal for m in self.metals if m.on_layer})
+
+    @cached_property
+    def majority_terminals(self) -> list[str]:
+        """Terminals that reach the base's majority carriers."""
+        return sorted({m.terminal for m in self.metals if not m.on_layer})
+
+    @cached_property
+    def hole_terminals(self) -> list[str]:
+        """Terminals that collect holes."""
+        return self.majority_terminals if self.problem.base.doping_type == "p" else self.minority_terminals
+
+    def offsets(self, voltages: Mapping[str, float]) -> NDArray[np.float64]:
+        """What the terminals add to f − s on layer unknowns, V, shape (n,); zero elsewhere."""
+        offset = np.zeros(self.problem.space.size)
+        base = voltages.get(self.majority_reference or "", 0.0)
+        for junction in self.junctions:
+            own = voltages[junction.terminal] if junction.terminal is not None else base
+            offset[junction.dofs] = base - own
+        return offset
+
+    def check(self) -> None:
+        """Refuse layouts without a finite, unique answer.
+
+        Raises
+        ------
+        InputError
+            One terminal on both polarities; a terminal without a way for the other carriers; touching patches that
+            impose different potentials.
+        """
+        problems = Complaints("solve_bipolar")
+        for name in sorted(set(self.minority_terminals) & set(self.majority_terminals)):
+            given = f"the terminal {name!r} on layers of both polarities (or on a layer and on the bare base)"
+            problems.add(given, "one polarity per terminal; this would short the cell", "two terminal names")
+        if bool(self.minority_terminals) != bool(self.majority_terminals):
+            only = (self.minority_terminals or self.majority_terminals)[0]
+            kind = "majority" if self.minority_terminals else "minority"
+            given = f"the terminal {only!r} alone: no path for {kind} carriers to a terminal"
+            problems.add(given, "contacts for both carriers, or none at all", f"a contact for the {kind} carriers")
+        if (self.layer & self.bare).any():
+            given = "bare metal (infinite srv) that touches a layer of the type opposite to the base"
+            allowed = "no touching surfaces that impose different potentials: the current between them is infinite"
+            problems.add(given, allowed, "a gap, or a finite srv_cm_per_s (1e7 is near the thermal velocity)")
+        self._check_ideal(problems)
+        problems.raise_if_any()
+
+    def _check_ideal(self, problems: Complaints) -> None:
+        ideal = [m for m in self.metals if m.resistivity_ohm_cm2 == 0]
+        for i, a in enumerate(ideal):
+            for b in ideal[i + 1 :]:
+                if a.terminal != b.terminal and a.on_layer == b.on_layer and np.intersect1d(a.dofs, b.dofs).size:
+                    given = f"ideal contacts {a.surface} and {b.surface} of different terminals that touch"
+                    problems.add(given, "a finite current between them", "a gap or a contact_resistivity_mohm_cm2")
+
+
+def mass_of(basis: Any) -> Any:
+    """∫ u v over a surface."""
+    from skfem import BilinearForm
+
+    return BilinearForm(lambda u, v, w: u * v).assemble(basis).tocsr()
+
+
+def sheet_stiffness(basis: Any) -> Any:
+    """∫ ∇s u·∇s v over a surface, ∇s the gradient along it.
+
+    The normal part is taken off each gradient, not off their product: in flat cells it is many decades larger.
+    """
+    from skfem import BilinearForm
+    from skfem.helpers import dot, grad
+
+    def along(u: Any, w: Any) -> Any:
+        return grad(u) - w.n * dot(grad(u), w.n)
+
+    def integrand(u: Any, v: Any, w: Any) -> Any:
+        return dot(along(u, w), along(v, w))
+
+    return BilinearForm(integrand).assemble(basis).tocsr()
+
+
+def per_charge(matrix: Any) -> Any:
+    """A conductance as carriers per second and volt."""
+    return matrix / ELEMENTARY_CHARGE_C

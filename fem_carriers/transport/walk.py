@@ -1,0 +1,164 @@
+"""Continuation in voltage: from a uniform splitting near the implied voltage to any set of terminal voltages."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from ..errors import SolverError
+from .bipolar import BipolarSystem, Unknowns
+from .bipolar_newton import BipolarState, Equations, newton_bipolar
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+SMALLEST_STEP_V = 2e-4
+EXHAUSTED = 1e-2
+"""Majority density at a contact, relative to equilibrium, below which a failure is put down to exhaustion."""
+
+
+@dataclass
+class Walker:
+    """Solves one system at many voltages, each from the nearest solved state.
+
+    Parameters
+    ----------
+    system : BipolarSystem
+    states : list of BipolarState
+        Everything solved so far.
+    """
+
+    system: BipolarSystem
+    states: list[BipolarState] = field(default_factory=list)
+
+    def __post_init__(self) -> None:
+        self.system.conductors.check()
+        self.equations = Equations(self.system)
+
+    def at(self, voltages: Mapping[str, float]) -> BipolarState:
+        """State at terminal voltages (frame of a p-type base).
+
+        Raises
+        ------
+        SolverError
+            "majority carriers exhausted" or "not converged", naming the voltage that could be reached.
+        """
+        if not self.states:
+            self.states.append(self._first(voltages))
+        nearest = min(self.states, key=lambda s: _distance(s.voltages, voltages))
+        return self._walk(nearest, dict(voltages))
+
+    def _first(self, voltages: Mapping[str, float]) -> BipolarState:
+        """A state that is solved from a uniform splitting: near the implied voltage, or at the bias asked for."""
+        implied = implied_voltage_V(self.system)
+        asked = self._bias(voltages)
+        error: SolverError | None = None
+        for lift in (0.0, 0.01, -0.02, 0.03, -0.05, 0.06, -0.1):
+            bias = max(implied + lift, asked, 0.0)
+            try:
+                return newton_bipolar(self.equations, self._uniform(bias), self._at_bias(voltages, bias))
+            except SolverError as failed:
+                error = failed
+        assert error is not None
+        raise error
+
+    def _uniform(self, bias: float) -> Unknowns:
+        n = self.system.space.size
+        return Unknowns(np.full(n, self.system.roles.density(bias)[0]), np.zeros(n), np.zeros(n))
+
+    def _bias(self, voltages: Mapping[str, float]) -> float:
+        """Largest forward bias of a junction."""
+        offsets = self.system.conductors.offsets(voltages)[self.system.conductors.layer]
+        return float(offsets.max(initial=0.0))
+
+    def _at_bias(self, voltages: Mapping[str, float], bias: float) -> dict[str, float]:
+        """One polarity at the bias, the other at 0, on the side where the terminals asked for are."""
+        majority = self.system.conductors.majority_terminals
+        if self.system.roles.sign > 0:
+            return {t: bias if t in majority else 0.0 for t in voltages}
+        return {t: 0.0 if t in majority else -bias for t in voltages}
+
+    def _walk(self, state: BipolarState, target: dict[str, float]) -> BipolarState:
+        """Step from a state to the target; steps are halved where Newton fails and doubled where it does well."""
+        done, step, failure = 0.0, 1.0, "the starting state"
+        origin, length = state, _distance(state.voltages, target)
+        while done < 1.0:
+            share = min(1.0, done + step)
+            voltages = {t: (1 - share) * origin.voltages[t] + share * target[t] for t in target}
+            try:
+                state = newton_bipolar(self.equations, _predicted(state, voltages), voltages)
+                self.states.append(state)
+                done, step = share, 2 * step
+            except SolverError as failed:
+                failure, step = str(failed), step / 2
+                if step * length < SMALLEST_STEP_V:
+                    raise self._refusal(state, target, failure) from failed
+        return state
+
+    def _refusal(self, state: BipolarState, target: Mapping[str, float], failure: str) -> SolverError:
+        reached, wanted = self._bias(state.voltages), self._bias(target)
+        contact = exhausted_contact(state)
+        if contact:
+            return SolverError(
+                "majority carriers exhausted",
+                f"Majority carriers are exhausted at contact {contact} at {reached:.4g} V: the photocurrent cannot be "
+                f"carried at {wanted:.4g} V. Try a higher doping, a wider contact, less light, or a higher voltage.",
+            )
+        return SolverError(
+            "not converged",
+            f"No solution at {wanted:.4g} V; {reached:.4g} V was reached ({failure}). Try a smaller first step of the "
+            "mesh, or check for extreme inputs.",
+        )
+
+
+def _distance(a: Mapping[str, float], b: Mapping[str, float]) -> float:
+    return max((abs(a[t] - b[t]) for t in b), default=0.0)
+
+
+def _predicted(state: BipolarState, voltages: Mapping[str, float]) -> Unknowns:
+    """Start for the next voltage: the last solution."""
+    del voltages
+    return state.x
+
+
+def exhausted_contact(state: BipolarState) -> str:
+    """Name of a majority contact where the majority density is nearly gone; empty if there is none."""
+    roles = state.system.roles
+    for metal in state.system.conductors.metals:
+        if not metal.on_layer and float((roles.M0 + state.dn[metal.dofs]).min()) < EXHAUSTED * roles.M0:
+            return metal.surface
+    return ""
+
+
+def implied_voltage_V(system: BipolarSystem) -> float:
+    """Uniform splitting at which ∫ R + ∮ U balances ∫ G; 0 without light.
+
+    Raises
+    ------
+    SolverError
+        "no sink for carriers".
+    """
+    from scipy.optimize import brentq
+
+    generated = float(system.load.sum())
+    if generated <= 0:
+        return 0.0
+    one: NDArray[np.float64] = np.ones(system.space.size)
+
+    def excess(u: float) -> float:
+        dn = system.roles.density(u)[0] * one
+        lost = sum(system.bulk_rates(dn).values()) + sum(system.surface_rates(dn).values())
+        return lost - generated
+
+    high = 0.2
+    while excess(high) <= 0:
+        high *= 1.3
+        if high > 12:
+            raise SolverError(
+                "no sink for carriers",
+                "Nothing recombines, so no voltage balances the light. Try a lifetime, a J0 or srv on a surface.",
+            )
+    return float(brentq(excess, 0.0, high, xtol=1e-4))
