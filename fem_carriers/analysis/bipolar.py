@@ -35,35 +35,41 @@ class BipolarSolution(Solution):
     """A solution of the bipolar form; everything of `Solution`, and terminal currents, potentials, losses."""
 
     @property
+    def bipolar(self) -> BipolarState:
+        """The state, with its potentials and currents."""
+        assert isinstance(self.state, BipolarState)
+        return self.state
+
+    @property
     def voltage_V(self) -> Mapping[str, float]:
         """Voltage of every terminal."""
-        return self.state.voltages_V
+        return self.bipolar.voltages_V
 
     @property
     def current_mA_per_cm2(self) -> Mapping[str, float]:
         """Conventional current that leaves the cell at every terminal; they sum to zero."""
-        return {t: i / self.problem.cell_area_cm2 / MA for t, i in self.state.currents_A.items()}
+        return {t: i / self.problem.cell_area_cm2 / MA for t, i in self.bipolar.currents_A.items()}
 
     @property
     def collected_mA_per_cm2(self) -> Mapping[str, float]:
         """Carriers collected by every terminal, positive under light: holes or electrons, as the terminal takes."""
-        holes = self.state.system.conductors.hole_terminals
+        holes = self.bipolar.system.conductors.hole_terminals
         return {t: j if t in holes else -j for t, j in self.current_mA_per_cm2.items()}
 
     @property
     def cell_current_mA_per_cm2(self) -> float:
         """Current out of the hole-collecting terminals; photocurrent positive."""
-        return sum(self.current_mA_per_cm2[t] for t in self.state.system.conductors.hole_terminals)
+        return sum(self.current_mA_per_cm2[t] for t in self.bipolar.system.conductors.hole_terminals)
 
     @property
     def cell_voltage_V(self) -> float:
         """Voltage of the hole-collecting over the electron-collecting terminal (the first of each by name)."""
-        conductors = self.state.system.conductors
+        conductors = self.bipolar.system.conductors
         pair = (conductors.majority_reference, next(iter(conductors.minority_terminals), None))
         if None in pair:
             return self.implied_voltage_V
         majority, minority = (self.voltage_V[str(t)] for t in pair)
-        return (majority - minority) * self.state.system.roles.sign
+        return (majority - minority) * self.bipolar.system.roles.sign
 
     @property
     def power_mW_per_cm2(self) -> float:
@@ -73,14 +79,14 @@ class BipolarSolution(Solution):
     @cached_property
     def implied_voltage_V(self) -> float:
         """VT ln(np/ni²) at the mean excess density of the base."""
-        bulk, roles = self.problem.space.bulk, self.state.system.roles
-        mean = float((bulk.values(self.state.dn) * bulk.dx).sum() / bulk.dx.sum())
+        bulk, roles = self.problem.space.bulk, self.bipolar.system.roles
+        mean = float((bulk.values(self.bipolar.dn) * bulk.dx).sum() / bulk.dx.sum())
         return float(roles.splitting(mean))
 
     @cached_property
     def losses(self) -> Losses:
         """Loss budget in mW/cm²."""
-        return make_losses(self.state, self.cell_current_mA_per_cm2)
+        return make_losses(self.bipolar, self.cell_current_mA_per_cm2)
 
     @cached_property
     def nodal_fields(self) -> dict[str, NDArray[np.float64]]:
@@ -88,9 +94,9 @@ class BipolarSolution(Solution):
         from .fields import nodal_fields
 
         fields = nodal_fields(self.state)
-        sign, split = self.state.system.roles.sign, node_splitting(self.state)
-        reference = self.state.system.conductors.majority_reference
-        majority = sign * (self.state.x.f + self.state.voltages.get(reference or "", 0.0))
+        sign, split = self.bipolar.system.roles.sign, node_splitting(self.bipolar)
+        reference = self.bipolar.system.conductors.majority_reference
+        majority = sign * (self.bipolar.x.f + self.bipolar.voltages.get(reference or "", 0.0))
         minority = majority - sign * split
         hole, electron = (majority, minority) if sign > 0 else (minority, majority)
         return fields | {
@@ -102,18 +108,12 @@ class BipolarSolution(Solution):
     @cached_property
     def currents_mA_per_cm2(self) -> dict[str, NDArray[np.float64]]:
         """Electron and hole current density as cell averages, each (dimension, n_cells), mA/cm²."""
-        system = self.state.system
+        system = self.bipolar.system
         dx = system.space.bulk.dx
         scale = system.roles.sign * ELEMENTARY_CHARGE_C / MA
-        mean = [scale * (j * dx).sum(axis=-1) / dx.sum(axis=-1) for j in system.fluxes(self.state.x)]
+        mean = [scale * (j * dx).sum(axis=-1) / dx.sum(axis=-1) for j in system.fluxes(self.bipolar.x)]
         names = ("electron", "hole") if system.roles.sign > 0 else ("hole", "electron")
         return dict(zip(names, mean, strict=True))
-
-    @property
-    def carrier_flux_mA_per_cm2(self) -> NDArray[np.float64]:
-        """The minority current as a flux towards sinks (positive along the way of the carriers)."""
-        sign = self.state.system.roles.sign
-        return -sign * self.currents_mA_per_cm2["electron" if sign > 0 else "hole"]
 
 
 def solve_bipolar(problem: Problem, voltage_V: float | Mapping[str, Condition] = 0.0) -> BipolarSolution:

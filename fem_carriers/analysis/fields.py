@@ -13,12 +13,11 @@ from ..transport.generation import generation_rate
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from ..transport.bipolar_newton import BipolarState
     from ..transport.problem import Problem
-    from ..transport.steady import ExcessState
+    from ..transport.state import SolvedState
 
 
-def nodal_fields(state: ExcessState | BipolarState) -> dict[str, NDArray[np.float64]]:
+def nodal_fields(state: SolvedState) -> dict[str, NDArray[np.float64]]:
     """Fields at the nodes, by name with unit; see `Solution.nodal_fields`."""
     system, dn = state.system, state.dn
     problem, space = system.problem, system.space
@@ -37,7 +36,7 @@ def nodal_fields(state: ExcessState | BipolarState) -> dict[str, NDArray[np.floa
     }
 
 
-def node_average(state: ExcessState | BipolarState, values: Any) -> NDArray[np.float64]:
+def node_average(state: SolvedState, values: Any) -> NDArray[np.float64]:
     """Average of quadrature values (n_cells, n_points) over the cells around each node, weighted by volume."""
     bulk = state.system.space.bulk
     cell_values, sizes = (values * bulk.dx).sum(axis=1), bulk.dx.sum(axis=1)
@@ -47,7 +46,7 @@ def node_average(state: ExcessState | BipolarState, values: Any) -> NDArray[np.f
     return np.asarray(total / np.bincount(dofs.ravel(), np.tile(sizes, local), n))
 
 
-def diffusion_length_um(state: ExcessState | BipolarState) -> NDArray[np.float64]:
+def diffusion_length_um(state: SolvedState) -> NDArray[np.float64]:
     """√(D Δn / R) per cell in µm; see `Solution.diffusion_length_um`."""
     system = state.system
     bulk = system.space.bulk

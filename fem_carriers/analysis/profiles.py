@@ -13,6 +13,7 @@ from ..transport.adjoint import collection_field
 from ..transport.bulk import make_bulk
 from ..transport.generation import generation_rate
 from ..transport.recombination import surface_law
+from ..transport.steady import ExcessState
 from ..units import MA
 
 if TYPE_CHECKING:
@@ -55,7 +56,7 @@ def lateral_losses(
     """
     import pandas as pd
 
-    state, problem = solution.state, solution.problem
+    state, problem = _excess(solution), solution.problem
     names = _contacts(problem, contact)
     space, system = problem.space, state.system
     to_current = ELEMENTARY_CHARGE_C / problem.cell_area_cm2 / MA
@@ -105,6 +106,16 @@ def shared_out(distance: Any, amount: Any, edges: Any) -> Any:
 def _ratio(wanted: Any, found: Any) -> Any:
     """Factor that brings a sampled sum to the exact one."""
     return np.where(found != 0, wanted / np.where(found != 0, found, 1.0), 0.0)
+
+
+def _excess(solution: Solution) -> ExcessState:
+    """The solution's state, which must be one of the excess-carrier form."""
+    problems = Complaints("lateral_losses")
+    given = type(solution).__name__
+    problems.unless(isinstance(solution.state, ExcessState), given, "a solution of solve_excess")
+    problems.raise_if_any()
+    assert isinstance(solution.state, ExcessState)
+    return solution.state
 
 
 def _sinks(solution: Solution) -> list[str]:

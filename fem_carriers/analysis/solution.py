@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from ..transport.generation import Optics
     from ..transport.newton import Outcome
     from ..transport.problem import Problem
-    from ..transport.steady import ExcessState
+    from ..transport.state import SolvedState
 
 
 @dataclass(frozen=True, eq=False)
@@ -30,14 +30,14 @@ class Solution:
 
     Parameters
     ----------
-    state : ExcessState or BipolarState
+    state : SolvedState
     ledger : Ledger
         Where the generated carriers went, mA/cm² of cell area.
     warnings : tuple of str
         Where the model's assumptions are strained.
     """
 
-    state: Any
+    state: SolvedState
     ledger: Ledger
     warnings: tuple[str, ...] = ()
 
@@ -54,7 +54,7 @@ class Solution:
     @property
     def voltage_V(self) -> Mapping[str, float]:
         """Forward bias of every collecting terminal."""
-        return self.state.constraints.voltages_V
+        return self.state.voltages_V
 
     @property
     def optics(self) -> Optics:
@@ -90,10 +90,8 @@ class Solution:
     @cached_property
     def carrier_flux_mA_per_cm2(self) -> NDArray[np.float64]:
         """−q Γ, the current equivalent of the carrier flux towards sinks, cell averages, shape (dimension, n_cells)."""
-        system, dn = self.state.system, self.state.dn
-        bulk = system.space.bulk
-        flux = system.flux(bulk.values(dn), bulk.gradients(dn))
-        mean = (flux * bulk.dx).sum(axis=-1) / bulk.dx.sum(axis=-1)
+        dx = self.problem.space.bulk.dx
+        mean = (self.state.minority_flux() * dx).sum(axis=-1) / dx.sum(axis=-1)
         return np.asarray(-ELEMENTARY_CHARGE_C * mean / MA)
 
     @cached_property
@@ -188,7 +186,7 @@ class Solution:
         return f"<p>{self.outcome}; {self.problem.space.size} unknowns</p>{self.ledger._repr_html_()}{notes}"
 
 
-def finish(state: ExcessState, warnings: tuple[str, ...]) -> Solution:
+def finish(state: SolvedState, warnings: tuple[str, ...]) -> Solution:
     """Close the ledger of a state and wrap it up.
 
     Raises

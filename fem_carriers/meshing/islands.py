@@ -97,15 +97,16 @@ def find_dots(cell: UnitCell, segments: int) -> list[Dots]:
     from ..cell.outlines import patch_outlines
     from ..cell.patches import Dot
 
-    frame, found = cell.frame, {}  # type: ignore[var-annotated]
+    frame = cell.frame
+    found: dict[tuple[float, float], tuple[tuple[float, float], set[float]]] = {}
     wide = replace(frame, x=_wider(frame.x, frame.period_x), y=_wider(frame.y, frame.period_y or 0.0))
     for patch in (p for face in (cell.front, cell.rear) for p in face.patches if isinstance(p, Dot)):  # type: ignore[union-attr]
         for shape in patch_outlines(patch, wide, segments) + patch_outlines(patch, wide, segments, opaque=True):
             if shape.intersection(frame.box).area > SAME_UM:
                 x, y = shape.centroid.coords[0]
-                key = (round(x, 6) + 0.0, round(y, 6) + 0.0)
-                found.setdefault(key, set()).add(round(shape.bounds[2] - x, 9))
-    return [Dots(center, _distinct(radii), segments) for center, radii in sorted(found.items())]
+                center, radii = found.setdefault((round(x, 6) + 0.0, round(y, 6) + 0.0), ((x, y), set()))
+                radii.add(round(shape.bounds[2] - center[0], 9))
+    return [Dots(center, _distinct(radii), segments) for _, (center, radii) in sorted(found.items())]
 
 
 def _wider(span: tuple[float, float], by: float) -> tuple[float, float]:

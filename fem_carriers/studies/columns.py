@@ -74,9 +74,11 @@ def solution_columns(solution: Solution) -> dict[str, float]:
 
 def _ledger_columns(ledger: Ledger) -> dict[str, float]:
     order = {"terminal": 0, "bulk": 1, "surface": 2}
-    rows = sorted(ledger.rows.items(), key=lambda row: order.get(row[0][0], 3))
-    words = {kind: "collected" if kind == "terminal" else "lost" for (kind, _), _ in rows}
-    return {f"{words[kind]}_{_plain(name)}_mA_per_cm2": value for (kind, name), value in rows}
+    columns: dict[str, float] = {}
+    for (kind, name), value in sorted(ledger.rows.items(), key=lambda row: order.get(row[0][0], 3)):
+        column = f"{'collected' if kind == 'terminal' else 'lost'}_{_plain(name)}_mA_per_cm2"
+        columns[column] = columns.get(column, 0.0) + value
+    return columns
 
 
 def _plain(name: str) -> str:

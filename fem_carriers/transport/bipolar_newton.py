@@ -65,6 +65,10 @@ class BipolarState:
         """Current out of the cell at every terminal, A (per cm of depth in 2-D), in the frame of a p-type base."""
         return _terminal_currents(self.system, self.x, self.residuals, self.voltages)
 
+    def minority_flux(self) -> Any:
+        """jm at the quadrature points, (dimension, n_cells, n_points), 1/(cm² s)."""
+        return self.system.fluxes(self.x)[0]
+
     @property
     def voltages_V(self) -> dict[str, float]:
         """Real terminal voltages."""

@@ -51,7 +51,8 @@ def newton(
     """Solve F(x) = 0 by damped Newton steps.
 
     A step is halved until the sum of |F| falls. It is done when the sum of |F| is below `tolerance` of the throughput
-    of carriers, or when steps no longer change x and F is at round-off.
+    of carriers, or when steps no longer change x and F is at round-off: small against the throughput, or against the
+    terms that F sums (where opposed fluxes cancel and nothing passes through).
 
     Parameters
     ----------
@@ -81,10 +82,11 @@ def newton(
             )
         if size <= tolerance and (step > 0 or size == 0):
             return x, Outcome("converged", step, float(size))
-        with Factorization(jacobian(x)) as factors:
+        matrix = jacobian(x)
+        with Factorization(matrix) as factors:
             change = -factors.solve(F)
         stalled = np.abs(change).max() <= 1e-12 * np.abs(x).max() and size >= 0.5 * best
-        if stalled and size <= 1e-9:
+        if stalled and (size <= 1e-9 or np.abs(F).sum() <= round_off(matrix, x)):
             return x, Outcome("converged", step, float(size))
         best = min(best, size)
         x, F = _damped(residual, x, F, change)
@@ -93,6 +95,11 @@ def newton(
         f"Newton's method stopped after {LARGEST_STEPS} steps at a residual of {size:.1e} of the carriers. "
         "Try a smaller first step, a lower light level first, or check for extreme inputs.",
     )
+
+
+def round_off(matrix: Any, x: NDArray[np.float64]) -> float:
+    """What rounding can leave in the sum of |F|: ε Σ |A| |x|."""
+    return float(np.finfo(float).eps * (abs(matrix) @ np.abs(x)).sum())
 
 
 def _damped(residual: Any, x: Any, F: Any, change: Any) -> tuple[Any, Any]:

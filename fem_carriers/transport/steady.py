@@ -74,6 +74,16 @@ class ExcessState:
     residual: NDArray[np.float64]
     outcome: Outcome
 
+    @property
+    def voltages_V(self) -> Mapping[str, float]:
+        """Forward bias of every collecting terminal."""
+        return self.constraints.voltages_V
+
+    def minority_flux(self) -> Any:
+        """Γ at the quadrature points, (dimension, n_cells, n_points), 1/(cm² s)."""
+        bulk = self.system.space.bulk
+        return self.system.flux(bulk.values(self.dn), bulk.gradients(self.dn))
+
     def leaving(self) -> dict[tuple[str, str], float]:
         """Carriers per second that leave where Δn is fixed, keyed by ("terminal", name) or ("surface", name).
 
