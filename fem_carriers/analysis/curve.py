@@ -32,8 +32,14 @@ class Point:
 
     voltage_V: float
     current_mA_per_cm2: float
-    slope_mA_per_cm2_V: float
     state: BipolarState
+
+    @cached_property
+    def slope_mA_per_cm2_V(self) -> float:
+        """dJ/dV, from the linearised equations."""
+        system = self.state.system
+        total = sum(self.state.slopes[t] for t in system.conductors.hole_terminals)
+        return system.roles.sign * total / system.problem.cell_area_cm2 / MA
 
     @property
     def power_mW_per_cm2(self) -> float:
@@ -158,8 +164,7 @@ class _Tracer:
             scale = system.roles.sign / system.problem.cell_area_cm2 / MA
             holes = system.conductors.hole_terminals
             current = scale * sum(state.terminal_currents[t] for t in holes)
-            slope = scale * sum(state.slopes[t] for t in holes)
-            self.points[voltage_V] = Point(voltage_V, current, slope, state)
+            self.points[voltage_V] = Point(voltage_V, current, state)
         return self.points[voltage_V]
 
     def open_circuit(self) -> Point:
@@ -181,12 +186,13 @@ class _Tracer:
 
     def _bracket(self, voc: float) -> tuple[Point, Point]:
         """Neighbouring points between which V J has its maximum."""
-        known = [self.points[v] for v in sorted(self.points) if 0 < v <= voc]
-        lower = [p for p in known if _rise(p) > 0]
-        upper = [p for p in known if _rise(p) <= 0]
-        if not lower:
-            lower = [self.at(0.0)]
-        return lower[-1], upper[0]
+        known = [self.points[v] for v in sorted(self.points) if 0 <= v <= voc]
+        best = max(range(len(known)), key=lambda i: known[i].power_mW_per_cm2)
+        if best == 0:
+            return known[0], known[1]
+        if _rise(known[best]) > 0:
+            return known[best], known[min(best + 1, len(known) - 1)]
+        return known[best - 1], known[best]
 
     def _root(self, voltage_V: float, function: object) -> Point:
         low, high = -math.inf, math.inf

@@ -23,7 +23,12 @@ LARGEST_CHANGE_VT = 10.0
 """Potentials move by at most this many thermal voltages per step."""
 SETTLED_V = 1e-7
 """A step below this (and as small in Δn, relatively) is the last one: convergence is quadratic."""
-LARGEST_RESIDUAL = 1e-10
+LARGEST_RESIDUAL = 1e-9
+"""Sum of |F| over the throughput of carriers that ends the polishing; the sums of F, which the balance needs, are far
+smaller still."""
+POLISHING_STEPS = 4
+KEEP_BELOW_VT = 0.1
+"""After a step below this many thermal voltages, and a tenth of the one before, the factors are kept."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -37,18 +42,26 @@ class BipolarState:
         In the frame of a p-type base (see `roles`), V.
     x : Unknowns
     outcome : Outcome
-    slopes : dict of terminal to float
-        dI/dV of every terminal current for a rise of the forward bias, A/V.
+    equations : Equations
     tangent : Unknowns
-        dx/dV for a rise of the forward bias.
+        dx/dV for a rise of the forward bias; approximate (by the last factors kept), good for predictions.
     """
 
     system: BipolarSystem
     voltages: Mapping[str, float]
     x: Unknowns
     outcome: Outcome
-    slopes: Mapping[str, float]
+    equations: Equations
     tangent: Unknowns
+
+    @cached_property
+    def slopes(self) -> dict[str, float]:
+        """dI/dV of every terminal current for a rise of the forward bias, A/V, in the frame of a p-type base."""
+        x, slope = self.system.completed(self.x, self.voltages)
+        A, rise = self.equations.matrix(x, slope)
+        solve = _solver(self.equations, A)
+        tangent = self.equations.spread @ solve(-(self.equations.gather @ rise))
+        return _current_slopes(self.system, tangent, A @ tangent + rise)
 
     @property
     def dn(self) -> NDArray[np.float64]:
@@ -203,43 +216,42 @@ def newton_bipolar(equations: Equations, start: Unknowns, voltages: Mapping[str,
     """
     system, VT = equations.system, equations.system.roles.VT
     x, slope = system.completed(equations.fixed_values(start, voltages), voltages)
+    moved, before = np.inf, np.inf
     for step in range(1, LARGEST_STEPS + 1):
         F = np.concatenate(system.residuals(x, voltages))
         if not np.isfinite(F).all():
             raise SolverError("not a number", "The residual is not finite.")
-        A, rise = equations.matrix(x, slope)
-        solve = _solver(equations, A, x)
+        if not moved < min(KEEP_BELOW_VT * VT, 0.1 * before):  # else the last factors still serve
+            A, rise = equations.matrix(x, slope)
+            solve = _solver(equations, A)
         change = solve(-(equations.gather @ F))
-        moved = _largest_potential(equations, change)
+        before, moved = moved, _largest_potential(equations, change)
         scale = min(1.0, LARGEST_CHANGE_VT * VT / moved) if moved > 0 else 1.0
         previous = x
         x, slope = system.completed(_advanced(equations, x, scale * change), voltages)
         settled = scale == 1.0 and moved < SETTLED_V and _relative(x.d - previous.d, x.d) < SETTLED_V / VT
         if settled:
-            return _finished(equations, x, voltages, step, A, rise, solve)
+            return _finished(equations, x, voltages, step, rise, solve)
     raise SolverError("not converged", f"Newton's method did not settle within {LARGEST_STEPS} steps.")
 
 
 def _finished(
-    equations: Equations, x: Unknowns, voltages: Mapping[str, float], step: int, A: Any, rise: Any, solve: Any
+    equations: Equations, x: Unknowns, voltages: Mapping[str, float], step: int, rise: Any, solve: Any
 ) -> BipolarState:
-    """State with its residual checked, and the slopes of its currents from the last factorisation."""
+    """State with its residual brought below the bound."""
     system = equations.system
-    residuals = system.residuals(x, voltages)
-    left = np.abs(equations.gather @ np.concatenate(residuals)).sum()
-    scale = _throughput(system, x, residuals, voltages)
-    if left > LARGEST_RESIDUAL * scale:
-        change = solve(-(equations.gather @ np.concatenate(residuals)))
-        x, _ = system.completed(_advanced(equations, x, change), voltages)
+    for polish in range(POLISHING_STEPS + 1):
         residuals = system.residuals(x, voltages)
-        left = np.abs(equations.gather @ np.concatenate(residuals)).sum()
-    tangent = equations.spread @ solve(-(equations.gather @ rise))
-    slopes = _current_slopes(system, tangent, A @ tangent + rise)
-    outcome = Outcome("converged", step, float(left / scale))
-    return BipolarState(system, dict(voltages), x, outcome, slopes, _unstack(system, tangent))
+        F = equations.gather @ np.concatenate(residuals)
+        size = float(np.abs(F).sum() / _throughput(system, x, residuals, voltages))
+        if size <= LARGEST_RESIDUAL or polish == POLISHING_STEPS:
+            break
+        x, _ = system.completed(_advanced(equations, x, solve(-F)), voltages)
+    tangent = _unstack(system, equations.spread @ solve(-(equations.gather @ rise)))
+    return BipolarState(system, dict(voltages), x, Outcome("converged", step, size), equations, tangent)
 
 
-def _solver(equations: Equations, A: Any, x: Unknowns) -> Any:
+def _solver(equations: Equations, A: Any) -> Any:
     """Function that solves the reduced equations, rows and columns scaled to one."""
     from scipy.sparse import diags
 
@@ -248,7 +260,7 @@ def _solver(equations: Equations, A: Any, x: Unknowns) -> Any:
     reduced = diags(rows) @ reduced
     columns = 1 / _largest(reduced, 0)
     factors = Factorization((reduced @ diags(columns)).tocsr(), scale=False)
-    return lambda right: columns * factors.solve(rows * right)
+    return lambda right: columns * factors.solve(rows * right, refinements=0)  # Newton steps refine anyway
 
 
 def _largest(matrix: Any, axis: int) -> NDArray[np.float64]:

@@ -234,10 +234,10 @@ def _throughput(system: ExcessSystem, constraints: Constraints, above: NDArray[n
 
 
 def _level(system: ExcessSystem, constraints: Constraints) -> float:
-    """Uniform density to start from: the largest one fixed, else where recombination balances generation."""
+    """Uniform density to start from: the one fixed everywhere, or where recombination balances generation; else 0."""
     if constraints.fixed.any():
         values = constraints.values[constraints.fixed]
-        return float(values[np.abs(values).argmax()])
+        return float(values[0]) if np.ptp(values) == 0 and system.drift is None else 0.0
     return uniform_density(system)
 
 

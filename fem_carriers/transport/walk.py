@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 SMALLEST_STEP_V = 2e-4
+LARGEST_PREDICTION_VT = 3.0
 EXHAUSTED = 1e-2
 """Majority density at a contact, relative to equilibrium, below which a failure is put down to exhaustion."""
 
@@ -119,9 +120,28 @@ def _distance(a: Mapping[str, float], b: Mapping[str, float]) -> float:
 
 
 def _predicted(state: BipolarState, voltages: Mapping[str, float]) -> Unknowns:
-    """Start for the next voltage: the last solution."""
-    del voltages
-    return state.x
+    """Start for the next voltage: the last solution, moved along its tangent if all biases move alike and little.
+
+    Δn is moved in its logarithm.
+    """
+    rise = _common_rise(state, voltages)
+    if abs(rise) > LARGEST_PREDICTION_VT * state.system.roles.VT:
+        return state.x
+    x, t = state.x, state.tangent
+    with np.errstate(divide="ignore", invalid="ignore"):
+        growth = np.where(x.d > 0, np.exp(np.clip(rise * t.d / x.d, -3.0, 3.0)), 1.0)
+    return Unknowns(x.d * growth, x.f + rise * t.f, x.s + rise * t.s)
+
+
+def _common_rise(state: BipolarState, voltages: Mapping[str, float]) -> float:
+    """Change of the forward bias, if it is the same for all pairs of terminals; infinite otherwise."""
+    conductors = state.system.conductors
+    rises = {
+        (voltages[a] - state.voltages[a]) - (voltages[b] - state.voltages[b])
+        for a in conductors.majority_terminals
+        for b in conductors.minority_terminals
+    }
+    return rises.pop() if len(rises) == 1 else np.inf
 
 
 def exhausted_contact(state: BipolarState) -> str:
