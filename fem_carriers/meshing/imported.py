@@ -36,7 +36,7 @@ def read_mesh(
 ) -> Mesh:
     """Read a mesh file and check it.
 
-    MSH 2.2, 4.0 and 4.1 (text and binary), VTU, XDMF, and what else meshio reads. Cells are first-order triangles,
+    MSH 2.2 and 4.1 (text and binary), VTU, XDMF, and what else meshio reads. Cells are first-order triangles,
     quads, tets or hexahedra of one kind; a 2-D mesh lies in the x–y or the x–z plane. Surfaces are made of line cells
     (2-D), triangles or quads (3-D) in the file; they may lie inside. Names come from
 

@@ -64,15 +64,15 @@ class Island:
     dots : Dots
     corner : (x, y)
         Corner of the rectangle of grid lines that becomes a circle, on the polygon of radius 1.
-    core : float
-        Share of the innermost rectangle that stays as it is.
+    straight_um : ((x, …), (y, …))
+        Distances from the centre, along each axis, of the straight outlines at right angles to it that cross the dots.
     reach_um : ((left, right), (below, above))
         Distances from the centre beyond which nothing moves.
     """
 
     dots: Dots
     corner: tuple[float, float]
-    core: float
+    straight_um: tuple[tuple[float, ...], tuple[float, ...]]
     reach_um: tuple[tuple[float, float], tuple[float, float]]
 
     def half_sides(self, radius_um: float) -> tuple[float, float]:
@@ -81,7 +81,7 @@ class Island:
 
 
 def find_dots(cell: UnitCell, segments: int) -> list[Dots]:
-    """All dots, and round shades, that reach into the modelled piece.
+    """All dots, and round shades, of the modelled piece and around it.
 
     Parameters
     ----------
@@ -99,13 +99,13 @@ def find_dots(cell: UnitCell, segments: int) -> list[Dots]:
 
     frame = cell.frame
     found: dict[tuple[float, float], tuple[tuple[float, float], set[float]]] = {}
-    wide = replace(frame, x=_wider(frame.x, frame.period_x), y=_wider(frame.y, frame.period_y or 0.0))
+    far = 2 * frame.period_x, 2 * (frame.period_y or 0.0)  # holds every copy whole, so that its centroid is its centre
+    wide = replace(frame, x=_wider(frame.x, far[0]), y=_wider(frame.y, far[1]))
     for patch in (p for face in (cell.front, cell.rear) for p in face.patches if isinstance(p, Dot)):  # type: ignore[union-attr]
         for shape in patch_outlines(patch, wide, segments) + patch_outlines(patch, wide, segments, opaque=True):
-            if shape.intersection(frame.box).area > SAME_UM:
-                x, y = shape.centroid.coords[0]
-                center, radii = found.setdefault((round(x, 6) + 0.0, round(y, 6) + 0.0), ((x, y), set()))
-                radii.add(round(shape.bounds[2] - center[0], 9))
+            x, y = shape.centroid.coords[0]
+            center, radii = found.setdefault((round(x, 6) + 0.0, round(y, 6) + 0.0), ((x, y), set()))
+            radii.add(round(shape.bounds[2] - center[0], 9))
     return [Dots(center, _distinct(radii), segments) for _, (center, radii) in sorted(found.items())]
 
 
@@ -127,27 +127,43 @@ def on_dots(ends_um: NDArray[np.float64], dots: Sequence[Dots]) -> bool:
     return bool(np.all(contains(band, linestrings(ends_um)))) if len(ends_um) else True
 
 
-def fit_islands(dots: Sequence[Dots], straight_um: NDArray[np.float64], box: Any) -> list[Island] | None:
-    """Zones around all dots that leave every straight outline straight.
+def fit_islands(
+    dots: Sequence[Dots], straight_um: NDArray[np.float64], box: Any, periodic: tuple[bool, bool]
+) -> list[Island] | None:
+    """Zones around all dots that reach into the piece, which leave every straight outline straight.
 
     Parameters
     ----------
     dots : sequence of Dots
+        Those around the piece too.
     straight_um : (n, 2 ends, 2 coordinates) float array
-        Axis-parallel outlines.
+        Axis-parallel outlines in the piece.
     box : shapely.Polygon
         The modelled piece; its sides stay straight too.
+    periodic : (bool, bool)
+        Whether the pattern in the piece repeats across x (across y).
 
     Returns
     -------
     list of Island, or None
-        None if a straight outline touches a circle or passes too close outside, or dots are too close to each other.
+        None if a straight outline touches a circle, straight outlines along x and y cross a dot both far from its
+        centre, or dots overlap.
     """
     corners = np.array(box.exterior.coords)
     lines = np.concatenate([straight_um, np.stack([corners[:-1], corners[1:]], axis=1)])
-    limits = [_limits(dot, dots) for dot in dots]
-    islands = [_island(dot, lines, limit) for dot, limit in zip(dots, limits, strict=True)]
+    period = np.ptp(corners, axis=0)
+    for axis in np.flatnonzero(periodic):  # copies of one dot across a side then see the same lines
+        step = np.where(np.arange(2) == axis, period, 0.0)
+        lines = np.concatenate([lines - step, lines, lines + step])
+    inside = [dot for dot in dots if _reaches(dot, box)]
+    islands = [_island(dot, lines, _limits(dot, dots)) for dot in inside]
     return None if any(i is None for i in islands) else [i for i in islands if i is not None]
+
+
+def _reaches(dot: Dots, box: Any) -> bool:
+    from shapely import Polygon
+
+    return bool(Polygon(dot.outline(dot.radii_um[-1])).intersection(box).area > SAME_UM)
 
 
 def _limits(dot: Dots, others: Iterable[Dots]) -> tuple[float, float]:
@@ -163,20 +179,24 @@ def _limits(dot: Dots, others: Iterable[Dots]) -> tuple[float, float]:
 
 
 def _island(dots: Dots, lines: NDArray[np.float64], limits: tuple[float, float]) -> Island | None:
-    smallest, largest = dots.radii_um[0], dots.radii_um[-1]
-    crossing, reach = [], []
+    largest = dots.radii_um[-1]
+    straight, reach = [], []
     for axis in (0, 1):
         offsets = _offsets(lines, dots.center_um, axis, limits)
-        crossing.append(max((abs(o) for o in offsets if abs(o) < largest - SAME_UM), default=0.0))
+        straight.append(tuple(sorted({abs(o) for o in offsets if abs(o) < largest - SAME_UM})))
         outside = [o for o in offsets if abs(o) >= largest - SAME_UM]
         below = min([limits[axis], *(-o for o in outside if o < 0)])
         reach.append((below, min([limits[axis], *(o for o in outside if o > 0)])))
-    corner = _best_corner(dots.segments, np.array(crossing) / smallest)
-    if corner is None or np.min(reach) < (1 + TANGENT) * largest:
+    touching = any(r <= o < (1 + TANGENT) * r for r in dots.radii_um for group in straight for o in group)
+    corner = _best_corner(dots.segments, np.array([_outermost(group, dots.radii_um) for group in straight]))
+    if corner is None or touching or np.min(reach) < (1 + TANGENT) * largest:
         return None
-    island = Island(dots, corner, 0.0, (reach[0], reach[1]))
-    share = max(c / h for c, h in zip(crossing, island.half_sides(smallest), strict=True))
-    return replace(island, core=share)
+    return Island(dots, corner, (straight[0], straight[1]), (reach[0], reach[1]))
+
+
+def _outermost(offsets: tuple[float, ...], radii: tuple[float, ...]) -> float:
+    """Largest distance of a crossing line in units of the next larger circle's radius."""
+    return max((o / min(r for r in radii if r > o) for o in offsets), default=0.0)
 
 
 def _offsets(

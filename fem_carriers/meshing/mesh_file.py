@@ -97,8 +97,10 @@ def _read_quietly(path: Path, file_format: str | None) -> Any:
             warnings.filterwarnings("error", message=".*could not be read to its end.*")
             return meshio.read(path, file_format)
     except (Exception, SystemExit) as error:
-        reason = said.getvalue() if isinstance(error, SystemExit) else f"{type(error).__name__}: {error}"
+        printed = said.getvalue().split("Error: Couldn't read file")[0]
+        reason = printed if isinstance(error, SystemExit) else f"{type(error).__name__}: {error}"
+        reason = " ".join(reason.replace(str(path), path.name).split())[:300] or "not in the form its name promises"
         raise MeshError(
-            f"{path}: the file cannot be read as a mesh ({' '.join(reason.split())[:300]}). Try exporting it again, as "
+            f"{path}: the file cannot be read as a mesh ({reason}). Try exporting it again, as "
             "MSH 2.2 text with physical groups and without elements outside of them, or as VTU or XDMF."
         ) from error

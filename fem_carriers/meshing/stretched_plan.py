@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .islands import Island, bulge
+from .islands import SAME_UM, Island, bulge
 from .plan_view import PlanMesh
 
 if TYPE_CHECKING:
@@ -38,11 +38,14 @@ def stretched_plan(
     Returns
     -------
     PlanMesh, or None
-        None if a triangle would be folded.
+        None if a triangle would be folded, a side would bend, or periodic sides would differ.
     """
     points = np.stack(np.meshgrid(x_um, y_um, indexing="ij")).reshape(2, -1)
     moved = points + sum((_shift(points, island) for island in islands), np.zeros_like(points))
-    moved = _sides_kept(points, moved, x_um, y_um, periodic)
+    kept = _sides_kept(points, moved, x_um, y_um, periodic)
+    if np.abs(kept - moved).max() > SAME_UM:
+        return None
+    moved = kept
     plan = PlanMesh(moved, _triangles(moved, x_um.size, y_um.size))
     a, b, c = (moved[:, corner] for corner in plan.triangles)
     doubled = (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
@@ -51,16 +54,15 @@ def stretched_plan(
 
 def _shift(points: NDArray[np.float64], island: Island) -> NDArray[np.float64]:
     """Displacement (2, n) of the points of an island's zone; the nested rectangles have levels 0 (centre), 1, 2, …"""
-    radii, count = np.asarray(island.dots.radii_um), len(island.dots.radii_um)
+    radii = np.asarray(island.dots.radii_um)
     local = points - np.asarray(island.dots.center_um)[:, None]
-    halves = np.array([island.half_sides(r) for r in radii])  # (count, 2)
-    knots = np.arange(count + 2.0)
-    sizes = [_sizes(local[i] > 0, halves[:, i], island.reach_um[i]) for i in (0, 1)]  # (count + 2, n) each
+    halves = np.array([island.half_sides(r) for r in radii])  # (n_circles, 2)
+    sizes = [_sizes(local[i] > 0, halves[:, i], island.reach_um[i]) for i in (0, 1)]  # (n_circles + 2, n) each
     level = np.stack([_between(np.abs(local[i]), sizes[i]) for i in (0, 1)])
     top = level.max(axis=0)
-    amount = np.interp(top, [0.0, island.core, *knots[1:]], [0.0, 0.0, *radii, 0.0], right=0.0)
     shift = np.zeros_like(points)
     for i in (0, 1):
+        amount = _amount(top, radii, halves[:, i], island.straight_um[i])
         mine = (level[i] >= level[1 - i]) & (amount > 0)
         if not mine.any():
             continue
@@ -68,6 +70,17 @@ def _shift(points: NDArray[np.float64], island: Island) -> NDArray[np.float64]:
         along = np.abs(local[1 - i, mine]) / there * halves[0, 1 - i] / radii[0]  # on the circle of radius 1
         shift[i, mine] = np.sign(local[i, mine]) * amount[mine] * bulge(island, i, along)
     return shift
+
+
+def _amount(
+    level: NDArray[np.float64], radii: NDArray[np.float64], halves: NDArray[np.float64], straight: tuple[float, ...]
+) -> NDArray[np.float64]:
+    """Scale of the displacement at each level: the radius on a circle, 0 at straight lines, the centre and the rim."""
+    lines = np.interp(straight, [0.0, *halves], np.arange(radii.size + 1.0))
+    knots = np.concatenate([[0.0], np.arange(1.0, radii.size + 2), lines])
+    values = np.concatenate([[0.0], radii, [0.0], np.zeros(len(straight))])
+    order = np.argsort(knots, kind="stable")
+    return np.asarray(np.interp(level, knots[order], values[order], right=0.0))
 
 
 def _sizes(positive: NDArray[np.bool_], halves: NDArray[np.float64], reach: tuple[float, float]) -> NDArray[np.float64]:

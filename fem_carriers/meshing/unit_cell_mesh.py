@@ -175,7 +175,7 @@ def _stretched(cell: UnitCell, lines: Outlines, fineness: Fineness, periodic: tu
     dots = find_dots(cell, fineness.circle_corners)
     ends = _segments(lines.all)
     straight = np.abs(np.diff(ends, axis=1))[:, 0].min(axis=1) < 1e-9
-    islands = fit_islands(dots, ends[straight], cell.frame.box) if on_dots(ends[~straight], dots) else None
+    islands = fit_islands(dots, ends[straight], cell.frame.box, periodic) if on_dots(ends[~straight], dots) else None
     if islands is None:
         return None
     axes = [plan_axis(cell, axis, lines, fineness, _round(islands, axis, lines, fineness)) for axis in ("x", "y")]

@@ -270,6 +270,8 @@ class Drawing:
         if text:
             self._text(text, (0.985, 0.012), 9, NOTE).prop.justification_horizontal = "right"
         self.plotter.render()
+        if self.rim is not None:
+            self.plotter.render()  # the rim follows the camera one drawing late
 
     def _text(self, text: str, at: tuple[float, float], size: int, name: str, color: str = DARK) -> Any:
         return self.plotter.add_text(

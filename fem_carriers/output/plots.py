@@ -164,7 +164,7 @@ def _draw_losses(ax: Axes, x: NDArray[np.float64], table: pd.DataFrame, columns:
 
 
 def _loss_name(column: str) -> str:
-    text = split_name(column.removeprefix("lost_"))[0]
+    text = split_name(column.removeprefix("lost_"))[0].replace("_", " ")
     return {"shaded": "shading", "reflected": "reflection", "escaped": "escaped light"}.get(text, text)
 
 

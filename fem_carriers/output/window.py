@@ -21,6 +21,9 @@ if TYPE_CHECKING:
     from ..analysis.solution import Solution
 
 HELP = "n / b  field    l  log scale    m  copies    o  outlines and names    s  save picture    q  close"
+HELP_CUT = "    , / .  or drag  cut"
+PUSH = 0.05
+"""What a key press moves the cut by, of the size of the whole."""
 PICTURES = (".png", ".jpg", ".tif")
 
 
@@ -42,7 +45,8 @@ def view(
     plane that the mouse moves, outlines of the named surfaces, and the names of those in sight. Coordinates are in µm.
 
     Keys: ``n`` / ``b`` next and previous field, ``l`` logarithmic scale, ``m`` copies on and off, ``o`` outlines and
-    names, ``s`` save a picture into the current folder, ``q`` close.
+    names, ``,`` / ``.`` move the cut (or drag it: the section pushes, the arrow tilts), ``s`` save a picture into the
+    current folder, ``q`` close.
 
     Parameters
     ----------
@@ -144,12 +148,14 @@ class Window:
             copies = (min(2, most_copies(problem, "x")), min(2, most_copies(problem, "y")))
         self.single, self.several = images(problem, (1, 1)), images(problem, copies)
         self.copied = len(drawing.shown) > 1
+        self.widget: Any = None
+        self.help = HELP if drawing.plane is None else HELP + HELP_CUT
 
     def show(self) -> None:
         """Open, and return when the user closes the window."""
         for key, action in self.keys().items():
             self.plotter.add_key_event(key, action)
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
         self._place_plane()
         self.plotter.show(title="fem_carriers", auto_close=False)
 
@@ -162,21 +168,23 @@ class Window:
             "m": self._toggle_copies,
             "o": self._toggle_names,
             "s": self.save,
+            "comma": lambda: self._push(-PUSH),
+            "period": lambda: self._push(PUSH),
         }
 
     def _step(self, by: int) -> None:
         names = self.drawing.scene.names
         self.drawing.field = names[(names.index(self.drawing.field) + by) % len(names)]
         self.drawing.log = None
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
 
     def _toggle_log(self) -> None:
         self.drawing.log = not self.drawing.is_log
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
 
     def _toggle_names(self) -> None:
         self.drawing.named = not self.drawing.named
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
 
     def _toggle_copies(self) -> None:
         if len(self.several) == 1:
@@ -184,21 +192,37 @@ class Window:
         self.copied = not self.copied
         self.drawing.change_images(self.several if self.copied else self.single)
         self.plotter.clear_plane_widgets()
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
         self._place_plane()
 
     def _place_plane(self) -> None:
         if self.drawing.plane is None:
             return
         normal, origin = self.drawing.plane
-        self.plotter.add_plane_widget(
+        self.widget = self.plotter.add_plane_widget(
             self._move_plane, normal=normal, origin=origin, bounds=self.drawing.grid.bounds, factor=1.1,
             color="#555555", test_callback=False, outline_opacity=0.0, implicit=True,
         )  # fmt: skip
+        self.widget.SetDrawPlane(True)  # hardly visible, but the mouse can take it and push
+        for style in (self.widget.GetPlaneProperty(), self.widget.GetSelectedPlaneProperty()):
+            style.SetOpacity(0.01)
+        self.plotter.render()
+
+    def _push(self, share: float) -> None:
+        """Move the cut along its normal by a share of the size of the whole."""
+        if self.drawing.plane is None:
+            return
+        normal, origin = (np.asarray(v) for v in self.drawing.plane)
+        b = np.reshape(self.drawing.grid.bounds, (3, 2))
+        reach = float(np.abs(normal) @ np.ptp(b, axis=1))
+        self.drawing.plane = (tuple(normal), tuple(np.clip(origin + share * reach * normal, b[:, 0], b[:, 1])))
+        if self.widget is not None:
+            self.widget.SetOrigin(self.drawing.plane[1])
+        self.drawing.draw(help_line=self.help)
 
     def _move_plane(self, normal: Any, origin: Any) -> None:
         self.drawing.plane = (tuple(normal), tuple(origin))
-        self.drawing.draw(help_line=HELP)
+        self.drawing.draw(help_line=self.help)
 
     def save(self) -> Path:
         """Save what is seen under a new name in the current folder."""

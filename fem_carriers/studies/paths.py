@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import difflib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -82,6 +82,22 @@ def value_at(cell: UnitCell, path: str) -> Any:
     return getattr(_ground(cell, place.node), place.name) if value is BELOW else value
 
 
+def check_paths(cell: UnitCell, paths: Iterable[str]) -> None:
+    """Refuse paths that the cell does not have.
+
+    Parameters
+    ----------
+    cell : UnitCell
+    paths : iterable of str
+
+    Raises
+    ------
+    InputError
+        Names the nearest known paths.
+    """
+    _located(cell, _nodes(cell), paths)
+
+
 def changed(cell: UnitCell, changes: Mapping[str, Any]) -> UnitCell:
     """A new cell with all changes applied together, validated once.
 
@@ -107,7 +123,7 @@ def changed(cell: UnitCell, changes: Mapping[str, Any]) -> UnitCell:
         Unknown paths, or a cell that is not allowed.
     """
     nodes = _nodes(cell)
-    places = _located(cell, nodes, list(changes))
+    places = _located(cell, nodes, changes)
     stated: dict[Node, dict[str, Any]] = {}
     for path, value in changes.items():
         stated.setdefault(places[path].node, {})[places[path].name] = plain(value)
@@ -178,9 +194,10 @@ def _takes_number(field: dataclasses.Field[Any]) -> bool:
     return bool({"float", "Varying"} & {part.strip() for part in str(field.type).split("|")})
 
 
-def _located(cell: UnitCell, nodes: Mapping[Node, Any], paths: list[str]) -> dict[str, _Place]:
+def _located(cell: UnitCell, nodes: Mapping[Node, Any], paths: Iterable[str]) -> dict[str, _Place]:
     """Place of every path; refuses unknown ones and two paths to one place."""
-    places, found = _places(nodes), {}
+    places = _places(nodes)
+    found: dict[str, _Place] = {}
     problems = Complaints("path")
     for path in paths:
         place = next((places[full] for full in _spellings(cell, path) if full in places), None)
@@ -237,7 +254,7 @@ def _rebuilt(owner: Any, numbers: Mapping[str, Any], children: Mapping[str, Any]
         return Light(tuple(children.get(str(i), s) for i, s in enumerate(owner.sources)))
     if isinstance(owner, Mapping):
         return {**owner, **children}
-    return dataclasses.replace(owner, **(_withdrawn(owner, numbers) | _fields(owner, numbers) | children))
+    return dataclasses.replace(owner, **{**_withdrawn(owner, numbers), **_fields(owner, numbers), **children})
 
 
 def _withdrawn(owner: Any, numbers: Mapping[str, Any]) -> dict[str, None]:

@@ -51,7 +51,7 @@ class Compute:
     """
 
     function: Callable[..., Any]
-    mesh_options: Mapping[str, float]
+    mesh_options: Mapping[str, Any]
 
     def __post_init__(self) -> None:
         problems = Complaints("sweep")

@@ -12,9 +12,9 @@ from typing import TYPE_CHECKING, Any
 from ..cell.unit_cell import UnitCell
 from ..errors import Complaints, SweepInterrupted
 from .columns import collected_current
-from .paths import changed, plain, value_at
+from .paths import changed, check_paths, plain
 from .point import Compute, Point, guarded, solved
-from .workers import CannotSpread, available_cores, run_spread
+from .workers import SpreadError, available_cores, run_spread
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -111,7 +111,7 @@ def _run(
         try:
             run_spread(solved, compute, jobs, count, done, lambda index, why: done(index, Point(failure=why)))
             return
-        except CannotSpread as reason:
+        except SpreadError as reason:
             advance(f"sweep runs in one process: {reason}")
     for index, cell in jobs:
         done(index, solved(compute, cell))
@@ -120,7 +120,8 @@ def _run(
 def _built(function: Callable[..., UnitCell], values: Values) -> UnitCell:
     cell = function(**values)
     problems = Complaints("sweep")
-    problems.unless(isinstance(cell, UnitCell), f"a function that returns {cell!r}", "a function that returns a UnitCell")
+    allowed = "a function that returns a UnitCell"
+    problems.unless(isinstance(cell, UnitCell), f"a function that returns {cell!r}", allowed)
     problems.raise_if_any()
     return cell
 
@@ -128,19 +129,17 @@ def _built(function: Callable[..., UnitCell], values: Values) -> UnitCell:
 def _as_function(source: Any, variables: Mapping[str, Any]) -> Callable[..., UnitCell]:
     """The cell as a function of the variables; refuses variables it does not have."""
     problems = Complaints("sweep")
-    if not problems.unless(isinstance(variables, Mapping) and bool(variables), f"variables = {variables!r}", _VARIABLES):
+    sound = isinstance(variables, Mapping) and bool(variables)
+    if not problems.unless(sound, f"variables = {variables!r}", 'a mapping such as {"pitch_um": [400, 600, 800]}'):
         problems.raise_if_any()
     if isinstance(source, UnitCell):
-        changed(source, {path: value_at(source, path) for path in variables})
+        check_paths(source, variables)
         return lambda **values: changed(source, values)
     allowed = "a UnitCell, or a function that returns one"
     if problems.unless(callable(source), f"cell_or_function = {source!r}", allowed):
         _check_arguments(problems, source, variables)
     problems.raise_if_any()
     return source  # type: ignore[no-any-return]
-
-
-_VARIABLES = 'a mapping such as {"pitch_um": [400, 600, 800]}'
 
 
 def _check_arguments(problems: Complaints, function: Callable[..., Any], variables: Mapping[str, Any]) -> None:

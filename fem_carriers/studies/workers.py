@@ -19,7 +19,7 @@ Done = Callable[[int, Any], None]
 THREAD_LIMITS = ("OMP_NUM_THREADS", "MKL_NUM_THREADS", "OPENBLAS_NUM_THREADS")
 
 
-class CannotSpread(Exception):
+class SpreadError(Exception):
     """The jobs cannot be sent to other processes; the text says why."""
 
 
@@ -49,7 +49,7 @@ def run_spread(function: Callable[..., Any], shared: Any, jobs: Jobs, processes:
 
     Raises
     ------
-    CannotSpread
+    SpreadError
         Before any job was done.
     """
     waiting = deque((index, _packed(function, shared, job)) for index, job in jobs)
@@ -66,7 +66,7 @@ def _packed(*parts: Any) -> bytes:
     try:
         return pickle.dumps(parts)
     except Exception as error:  # pickle raises whatever the object's own code does
-        raise CannotSpread(f"a part of the input cannot be sent to other processes ({error})") from error
+        raise SpreadError(f"a part of the input cannot be sent to other processes ({error})") from error
 
 
 def _one_pool(
@@ -118,9 +118,9 @@ def _try_out(pool: ProcessPoolExecutor, processes: int, payload: bytes, hidden: 
             future.result()
     except BrokenProcessPool as error:
         advice = "keep the call under `if __name__ == '__main__':`"
-        raise CannotSpread(f"other processes cannot be started here; in a script, {advice}") from error
+        raise SpreadError(f"other processes cannot be started here; in a script, {advice}") from error
     except Exception as error:
-        raise CannotSpread(f"a part of the input is not importable in other processes ({error})") from error
+        raise SpreadError(f"a part of the input is not importable in other processes ({error})") from error
 
 
 @contextmanager
@@ -164,7 +164,7 @@ def _starting(hidden: bool) -> Iterator[None]:
 
 def _begin() -> None:
     """In a new process: Ctrl-C is the parent's business, and one thread is enough."""
-    from threadpoolctl import threadpool_limits
+    from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
 
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     threadpool_limits(1)

@@ -66,32 +66,47 @@ class BipolarSystem(CarrierBalance):
     @cached_property
     def on_s(self) -> Any:
         """Linear operator of sheets and contacts on the layer potential, (n, n)."""
-        return self._operator(on_layer=True)
+        return -(self._sheets[True] + self._contacts[True])
 
     @cached_property
     def on_f(self) -> Any:
         """Linear operator of sheets and contacts on the majority potential, (n, n)."""
-        return self._operator(on_layer=False)
+        return -(self._sheets[False] + self._contacts[False])
 
-    def _operator(self, *, on_layer: bool) -> Any:
+    @cached_property
+    def _sheets(self) -> dict[bool, Any]:
+        """∫ ∇s u·∇s v / (q R_sh) over opposite-type layers (True), over layers of the base's type (False)."""
+        sheets = self.conductors.sheets.values()
+        return {side: self._sum([c for opposite, c in sheets if opposite == side]) for side in (True, False)}
+
+    @cached_property
+    def _contacts(self) -> dict[bool, Any]:
+        """∫ u v / (q ρc) over contacts on opposite-type layers (True), over those that reach the base (False)."""
+        metals = [m for m in self.conductors.metals if m.resistivity_ohm_cm2 > 0]
+        scaled = [(m.on_layer, m.mass / m.resistivity_ohm_cm2) for m in metals]
+        return {side: self._sum([c for on_layer, c in scaled if on_layer == side]) for side in (True, False)}
+
+    def _sum(self, parts: list[Any]) -> Any:
         from scipy.sparse import csr_matrix
 
-        total = csr_matrix((self.space.size, self.space.size))
-        for opposite, conductance in self.conductors.sheets.values():
-            if opposite == on_layer:
-                total = total - conductance
-        for metal in self.conductors.metals:
-            if metal.on_layer == on_layer and metal.resistivity_ohm_cm2 > 0:
-                total = total - metal.mass / metal.resistivity_ohm_cm2
-        return total / ELEMENTARY_CHARGE_C
+        return (sum(parts, csr_matrix((self.space.size, self.space.size))) / ELEMENTARY_CHARGE_C).tocsr()
+
+    def _conducted(self, potential: NDArray[Any], *, on_layer: bool) -> NDArray[Any]:
+        """Sheets and contacts applied to a potential.
+
+        A sheet acts on differences of the potential, which are exact; its rows then sum to zero to round-off of the
+        current, not of potential over cell size, and the balance closes on the finest meshes.
+        """
+        sheet = self._sheets[on_layer]
+        rows = np.repeat(np.arange(sheet.shape[0]), np.diff(sheet.indptr))
+        lateral = sheet.data * (potential[sheet.indices] - potential[rows])
+        along = np.bincount(rows, lateral, potential.size)
+        return np.asarray(-along - self._contacts[on_layer] @ potential)
 
     @cached_property
     def shunt(self) -> Any:
         """∫ u v / (q r_shunt) over all shunted junctions, (n, n)."""
-        from scipy.sparse import csr_matrix
-
-        zero = csr_matrix((self.space.size, self.space.size))
-        return sum(self.conductors.shunts.values(), zero) / ELEMENTARY_CHARGE_C
+        return self._sum(list(self.conductors.shunts.values()))
 
     def completed(self, unknowns: Unknowns, voltages: Mapping[str, float]) -> tuple[Unknowns, NDArray[Any]]:
         """Unknowns with Δn on layers from the potentials, and dΔn/du there (0 elsewhere)."""
@@ -108,8 +123,8 @@ class BipolarSystem(CarrierBalance):
         net = bulk.load(None, self.rate(bulk.values(x.d))[0]) - self.load
         net = net + self.surface_load(x.d) + self.shunt @ self.across(x, voltages)
         from_metal_s, from_metal_f = self._metal_loads(voltages)
-        Fm = bulk.load(minority) + net + self.on_s @ self._on_layer(x.s) + from_metal_s
-        FM = bulk.load(majority) - net + self.on_f @ x.f + from_metal_f
+        Fm = bulk.load(minority) + net + self._conducted(self._on_layer(x.s), on_layer=True) + from_metal_s
+        FM = bulk.load(majority) - net + self._conducted(x.f, on_layer=False) + from_metal_f
         return Fm, FM
 
     def fluxes(self, x: Unknowns) -> tuple[Any, Any]:

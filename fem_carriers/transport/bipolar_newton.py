@@ -23,9 +23,8 @@ LARGEST_CHANGE_VT = 10.0
 """Potentials move by at most this many thermal voltages per step."""
 SETTLED_V = 1e-7
 """A step below this (and as small in Δn, relatively) is the last one: convergence is quadratic."""
-LARGEST_RESIDUAL = 1e-9
-"""Sum of |F| over the throughput of carriers that ends the polishing; the sums of F, which the balance needs, are far
-smaller still."""
+LARGEST_MISCLOSURE = 1e-12
+"""Of the balances of both carriers, over the throughput, at which the polishing ends."""
 POLISHING_STEPS = 4
 KEEP_BELOW_VT = 0.1
 """After a step below this many thermal voltages, and a tenth of the one before, the factors are kept."""
@@ -156,6 +155,19 @@ class Equations:
         return csr_matrix((np.ones(rows.size), (rows, number)), shape=(2 * self.n, int(number.max()) + 1))
 
     @cached_property
+    def _free(self) -> NDArray[np.bool_]:
+        """Equations that must hold, stacked (2n,); the others are reactions."""
+        return np.asarray(abs(self.spread).sum(axis=1)).ravel() > 0
+
+    def misclosure(self, residuals: tuple[NDArray[np.float64], NDArray[np.float64]]) -> float:
+        """|Σ Fm| + |Σ FM| over the equations that must hold, carriers per second."""
+        Fm, FM = residuals
+        bare = self.system.conductors.bare
+        return float(
+            abs(Fm[self._free[: self.n]].sum()) + abs((FM + np.where(bare, Fm, 0.0))[self._free[self.n :]].sum())
+        )
+
+    @cached_property
     def gather(self) -> Any:
         """Sparse (n_free, 2n): all equations to those of the free unknowns.
 
@@ -242,10 +254,11 @@ def _finished(
     system = equations.system
     for polish in range(POLISHING_STEPS + 1):
         residuals = system.residuals(x, voltages)
-        F = equations.gather @ np.concatenate(residuals)
-        size = float(np.abs(F).sum() / _throughput(system, x, residuals, voltages))
-        if size <= LARGEST_RESIDUAL or polish == POLISHING_STEPS:
+        scale = _throughput(system, x, residuals, voltages)
+        size = equations.misclosure(residuals) / scale
+        if size <= LARGEST_MISCLOSURE or polish == POLISHING_STEPS:
             break
+        F = equations.gather @ np.concatenate(residuals)
         x, _ = system.completed(_advanced(equations, x, solve(-F)), voltages)
     tangent = _unstack(system, equations.spread @ solve(-(equations.gather @ rise)))
     return BipolarState(system, dict(voltages), x, Outcome("converged", step, size), equations, tangent)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 from copy import copy
 from functools import cache
 from typing import TYPE_CHECKING, Any
@@ -80,7 +81,7 @@ class Factorization:
         self._solver.free()
 
     def __del__(self) -> None:
-        if hasattr(self, "_solver"):
+        if hasattr(self, "_solver") and not sys.is_finalizing():
             self._solver.free()
 
 
