@@ -41,6 +41,8 @@ _WHERE = {
     "sweep": "studies.sweep",
     "view": "output.window",
     "plot_sweep": "output.plots",
+    "plot_curve": "output.power",
+    "plot_losses": "output.power",
     "plot_line": "output.plots",
     "plot_lateral_losses": "output.plots",
     "InputError": "errors",

@@ -35,6 +35,11 @@ class Source:
     mask: Any = ()
     shaded: bool = True
 
+    @property
+    def needs_plane(self) -> bool:
+        """Whether it matters which plane the light enters; for a bare rate it does not."""
+        return True
+
     def _check(self, problems: Complaints) -> None:
         checks.one_of(problems, "enters", self.enters, ("front", "rear"))
         object.__setattr__(self, "mask", check_masks(problems, self.mask))
@@ -120,6 +125,11 @@ class UniformRate(Source):
     rate_per_cm3_s: float
     shaded: bool = False
 
+    @property
+    def needs_plane(self) -> bool:
+        """A mask or metal lies in a plane."""
+        return bool(self.mask) or self.shaded
+
     def __post_init__(self) -> None:
         problems = Complaints("Light.uniform")
         self._check(problems)
@@ -133,6 +143,11 @@ class RateFunction(Source):
 
     rate: Callable[..., Any]
     shaded: bool = False
+
+    @property
+    def needs_plane(self) -> bool:
+        """A mask or metal lies in a plane."""
+        return bool(self.mask) or self.shaded
 
     def __post_init__(self) -> None:
         problems = Complaints("Light.function")

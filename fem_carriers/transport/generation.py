@@ -95,13 +95,12 @@ def assemble_generation(problem: Problem) -> tuple[NDArray[np.float64], Optics]:
     """
     load, optics = np.zeros(problem.space.size), Optics()
     for source in problem.light.sources if problem.light is not None else ():
-        plane = problem.lit_planes[source.enters]
         if isinstance(source, UniformRate | RateFunction):
-            part = _rate_load(problem.space, source, plane)
+            part = _rate_load(problem.space, source, problem.lit_planes)
             current = _current(float(part.sum()), problem.cell_area_cm2)
             optics += Optics(incident=current, generated=current)
         else:
-            part, share = _beam_load(problem, source, plane)
+            part, share = _beam_load(problem, source, problem.lit_planes[source.enters])
             optics += share
         load += part
     return load, optics
@@ -128,12 +127,13 @@ def inside(region: Any, a_um: Any, b_um: Any) -> Any:
     return intersects_xy(region, a_um.ravel(), b_um.ravel()).reshape(a_um.shape).astype(float)
 
 
-def _rate_load(space: Space, source: Any, plane: LitPlane) -> NDArray[np.float64]:
+def _rate_load(space: Space, source: Any, planes: Mapping[str, LitPlane]) -> NDArray[np.float64]:
     """∫ G v for a source given as a rate."""
     x = space.bulk.x_cm
     rate = source.rate_per_cm3_s if isinstance(source, UniformRate) else source.rate
     values = evaluate("Light.function", rate, x, zero=True) * np.ones(x.shape[1:])
-    if source.mask or source.shaded:
+    if source.needs_plane:
+        plane = planes[source.enters]
         values = values * inside(lit_region(source, plane), *plane.plane_um(x))
     return np.asarray(space.bulk.load(rate=values))
 
@@ -220,9 +220,10 @@ def generation_rate(x_cm: Any, light: Light | None, planes: Mapping[str, LitPlan
     """
     x, total = np.asarray(x_cm), np.zeros(np.shape(x_cm)[1:])
     for source in light.sources if light is not None else ():
-        plane = planes[source.enters]
-        region = lit_region(source, plane)
-        lit = inside(region, *plane.plane_um(x)) if source.mask or source.shaded else 1.0
+        lit: Any = 1.0
+        if source.needs_plane:
+            plane = planes[source.enters]
+            lit = inside(lit_region(source, plane), *plane.plane_um(x))
         if isinstance(source, UniformRate | RateFunction):
             rate = source.rate_per_cm3_s if isinstance(source, UniformRate) else source.rate
             total += evaluate("Light.function", rate, x, zero=True) * lit

@@ -105,7 +105,7 @@ class Problem:
                 name in self.mesh.surfaces, f"lit_surface {name!r}", f"one of {', '.join(self.mesh.surfaces)}"
             )
         for source in self.light.sources if self.light is not None else ():
-            if self.cell is None and source.enters not in self._lit_names:
+            if self.cell is None and source.needs_plane and source.enters not in self._lit_names:
                 problems.add(
                     f"light that enters the {source.enters} of an imported mesh",
                     'lit_surface, or {"front": ..., "rear": ...}, naming the flat surface it enters',

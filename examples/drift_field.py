@@ -1,0 +1,58 @@
+"""Carriers in a field: how far do they get with it and against it?
+
+In low injection the minority electrons of a p-type slab obey D Δn″ + µE Δn′ − Δn/τ + G = 0. Away from a narrow lit
+stripe Δn falls as exp(−|x|/L) with the two roots of D/L² ∓ v/L − 1/τ = 0, v = µ|E|:
+
+    L = 2D / (√(v² + 4D/τ) ∓ v),   − with the drift (downstream), + against it (upstream).
+
+The picture goes to the folder `results` where the script is run.
+"""
+
+import math
+from pathlib import Path
+
+import numpy as np
+
+import fem_carriers as fc
+
+FIELD_V_PER_CM, LIFETIME_US = 8.0, 10.0
+UPSTREAM_UM, DOWNSTREAM_UM, STRIPE_UM = 300.0, 1700.0, 20.0
+
+
+def decay_length_um(solution, start_um, end_um):
+    """Distance over which Δn falls by e, from a straight line through ln Δn."""
+    line = solution.along_line((start_um, 10), (end_um, 10), points=40)
+    slope = np.polyfit(line["distance_um"], np.log(line["excess_density_per_cm3"]), 1)[0]
+    return -1 / slope
+
+
+def main():
+    results = Path("results")
+    results.mkdir(exist_ok=True)
+    base = fc.Base(
+        "p", doping_per_cm3=1e16, thickness_um=20, lifetime_us=LIFETIME_US, auger=None, radiative_cm3_per_s=0,
+        mobility_n_cm2_per_Vs=1160, mobility_p_cm2_per_Vs=400,
+    )  # fmt: skip
+    stripe = fc.LitRectangle((UPSTREAM_UM - STRIPE_UM / 2, UPSTREAM_UM + STRIPE_UM / 2))
+    cell = fc.UnitCell(base, 2 * (UPSTREAM_UM + DOWNSTREAM_UM), light=fc.Light.uniform(1e17, mask=stripe))
+    # Electrons drift against the field: E towards −x carries them to larger x.
+    problem = fc.problem(cell)
+    for _ in range(4):  # cells shorter than the decay length against the drift
+        problem = problem.refined()
+    solution = fc.solve_excess(problem, field_V_per_cm=(-FIELD_V_PER_CM, 0.0))
+    found = (
+        decay_length_um(solution, UPSTREAM_UM + 100, UPSTREAM_UM + 1400),
+        decay_length_um(solution, UPSTREAM_UM - 20, UPSTREAM_UM - 200),
+    )
+    D, v, tau = base.equilibrium().Dn, base.mobility_n_cm2_per_Vs * FIELD_V_PER_CM, LIFETIME_US * 1e-6
+    root = math.sqrt(v**2 + 4 * D / tau)
+    exact = tuple(2 * D / (root - sign * v) * 1e4 for sign in (1, -1))
+    for way, length, formula in zip(("downstream", "upstream"), found, exact, strict=True):
+        print(f"{way}: decay length {length:.3f} µm, formula {formula:.3f} µm")
+    line = solution.along_line((0, 10), (UPSTREAM_UM + DOWNSTREAM_UM, 10), points=1001)
+    fc.plot_line(line, log=True, picture=results / "drift_field.png")
+    return found, exact
+
+
+if __name__ == "__main__":
+    main()
