@@ -17,7 +17,7 @@ import fem_carriers as fc
 from fem_carriers.studies.best import best_point
 
 DOT_UM, FIRST_STEP_UM = 90.0, 4.0
-PITCHES_UM = (180.0, 250.0, 320.0, 400.0, 500.0)
+PITCHES_UM = (180.0, 220.0, 260.0, 300.0, 350.0, 420.0, 500.0)
 
 wafer = fc.Base("p", doping_per_cm3=1.5e16, thickness_um=140, lifetime_us=300)
 emitter = fc.DopedLayer("n", sheet_resistance_ohm_per_sq=60)

@@ -45,6 +45,11 @@ class Fineness:
     plain_step_um: float
     circle_corners: int
 
+    @property
+    def can_be_coarser(self) -> bool:
+        """Whether the first step is still well below the largest ones."""
+        return self.first_step_um < 0.1 * min(self.largest_um, self.largest_depth_um)
+
 
 def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float | None) -> Fineness:
     """Default steps, from the smallest feature, the thickness and the diffusion length.

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from ..cell.masks import Spot
+from ..errors import ModelWarning
 from .extrude import extrude, periodic_rank, tensor_mesh
 from .fineness import MILD, Fineness, choose_fineness, singular_groups
 from .grading import graded_axis
@@ -23,6 +25,10 @@ if TYPE_CHECKING:
     from ..cell.unit_cell import UnitCell
     from .islands import Island
     from .plan_view import PlanMesh
+
+
+LARGEST_DEFAULT_POINTS = 25_000
+"""Mesh points above which the default first step is raised; quadratic elements have about eight unknowns a point."""
 
 
 @dataclass(frozen=True)
@@ -60,8 +66,28 @@ def mesh_unit_cell(cell: UnitCell, first_step_um: float | None = None, growth: f
     -------
     Mesh
         Surfaces "front", "front.<patch>", "rear", …, "x_min", …; one volume "base".
+
+    Warns
+    -----
+    ModelWarning
+        The default first step was raised to keep the mesh below `LARGEST_DEFAULT_POINTS`.
     """
     fineness = choose_fineness(cell, first_step_um, growth)
+    mesh = _mesh(cell, fineness)
+    while first_step_um is None and mesh.cells.p.shape[1] > LARGEST_DEFAULT_POINTS and fineness.can_be_coarser:
+        fineness = choose_fineness(cell, 2 * fineness.first_step_um, growth)
+        mesh = _mesh(cell, fineness)
+    if first_step_um is None and fineness.first_step_um > choose_fineness(cell, None, growth).first_step_um:
+        warnings.warn(
+            f"many patches: the first step of the mesh was raised to {fineness.first_step_um:.3g} µm to keep it small; "
+            "state first_step_um for a finer mesh, or model a smaller piece.",
+            ModelWarning,
+            stacklevel=3,
+        )
+    return mesh
+
+
+def _mesh(cell: UnitCell, fineness: Fineness) -> Mesh:
     layouts = {side: cell.layout(side, fineness.circle_corners) for side in ("front", "rear")}
     lines = collect_outlines(cell, layouts)
     depths = depth_axis(cell, layouts, fineness)

@@ -16,6 +16,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 LARGEST_STEPS = 80
+KEEP_BELOW = 0.1
+"""While a step lowers the sum of |F| below this share, the factors of the Jacobian are kept for the next one."""
 
 
 @dataclass(frozen=True)
@@ -45,6 +47,7 @@ def newton(
     jacobian: Callable[[NDArray[np.float64]], Any],
     start: NDArray[np.float64],
     throughput: Callable[[NDArray[np.float64]], float],
+    noise: Callable[[NDArray[np.float64]], float],
     *,
     tolerance: float = 1e-11,
 ) -> tuple[NDArray[np.float64], Outcome]:
@@ -60,6 +63,8 @@ def newton(
     start : (n,) array
     throughput : function
         The larger of generation and total recombination at x.
+    noise : function
+        What rounding can leave in the sum of |F| at x, see `round_off`.
     tolerance : float
 
     Returns
@@ -73,7 +78,7 @@ def newton(
         "not converged", "not a number" or "singular", with advice.
     """
     x, F = start, residual(start)
-    best = np.inf
+    best, factors = np.inf, None
     for step in range(LARGEST_STEPS):
         size = np.abs(F).sum() / max(throughput(x), 1e-300)
         if not np.isfinite(size):
@@ -82,14 +87,16 @@ def newton(
             )
         if size <= tolerance and (step > 0 or size == 0):
             return x, Outcome("converged", step, float(size))
-        matrix = jacobian(x)
-        with Factorization(matrix) as factors:
-            change = -factors.solve(F)
+        if factors is None:
+            factors = Factorization(jacobian(x))
+        change = -factors.solve(F)
         stalled = np.abs(change).max() <= 1e-12 * np.abs(x).max() and size >= 0.5 * best
-        if stalled and (size <= 1e-9 or np.abs(F).sum() <= round_off(matrix, x)):
+        if stalled and size <= 1e-9:
             return x, Outcome("converged", step, float(size))
-        best = min(best, size)
+        best, before = min(best, size), np.abs(F).sum()
         x, F = _damped(residual, x, F, change)
+        if np.abs(F).sum() > KEEP_BELOW * before:
+            factors = None  # else they still serve
     raise SolverError(
         "not converged",
         f"Newton's method stopped after {LARGEST_STEPS} steps at a residual of {size:.1e} of the carriers. "
@@ -98,7 +105,7 @@ def newton(
 
 
 def round_off(matrix: Any, x: NDArray[np.float64]) -> float:
-    """What rounding can leave in the sum of |F|: ε Σ |A| |x|."""
+    """What rounding can leave in the sum of |F| where F sums the terms A x: ε Σ |A| |x|."""
     return float(np.finfo(float).eps * (abs(matrix) @ np.abs(x)).sum())
 
 

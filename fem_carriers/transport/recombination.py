@@ -66,7 +66,7 @@ def _defect_laws(base: Base, eq: Equilibrium, x_cm: Any) -> list[tuple[str, Law]
             return []
         tau = evaluate("lifetime_us", base.lifetime_us, x_cm) * US
         return [("lifetime", lambda dn: laws.constant_lifetime(dn, tau))]
-    if base.tau_n0_us == math.inf and base.tau_p0_us == math.inf:
+    if math.inf in (base.tau_n0_us, base.tau_p0_us):  # one carrier is never captured
         return []
     tau_n0 = evaluate("tau_n0_us", base.tau_n0_us, x_cm) * US  # type: ignore[arg-type]
     tau_p0 = evaluate("tau_p0_us", base.tau_p0_us, x_cm) * US  # type: ignore[arg-type]

@@ -12,7 +12,7 @@ import numpy as np
 from ..errors import Complaints, SolverError
 from .coefficients import junction_density
 from .excess import ExcessSystem
-from .newton import Outcome, newton
+from .newton import Outcome, newton, round_off
 from .ties import Junction, find_junctions, periodic_map
 
 if TYPE_CHECKING:
@@ -105,6 +105,8 @@ def fixed_weights(problem: Problem, constraints: Constraints) -> dict[tuple[str,
             for name in junction.surfaces:
                 key = ("terminal", junction.terminal)
                 weights[key] = weights.get(key, 0.0) + _node_areas(problem, name) * on
+        elif fixed[junction.dofs].all():  # shorted by bare metal that it touches
+            weights |= {("surface", name): _node_areas(problem, name) * fixed for name in junction.surfaces}
     for name in _bare_metal(problem):
         weights["surface", name] = _node_areas(problem, name) * fixed
     return weights
@@ -150,6 +152,9 @@ def constrain(problem: Problem, voltage_V: float | Mapping[str, float]) -> Const
             values[junction.dofs] = junction_density(voltages[junction.terminal], problem.equilibrium)
     for name in _bare_metal(problem):
         _pin(problem, name, values)
+    for junction in junctions:
+        if junction.terminal is None:
+            _short(partner, junction, values)
     fixed = np.isfinite(values)
     _fix_partners(fixed, values, partner)
     group[fixed] = -1
@@ -182,6 +187,13 @@ def _pin(problem: Problem, name: str, values: NDArray[np.float64]) -> None:
         )
         problems.raise_if_any()
     values[dofs] = 0.0
+
+
+def _short(partner: NDArray[np.int64], junction: Junction, values: NDArray[np.float64]) -> None:
+    """A floating layer that touches bare metal anywhere is at its density everywhere."""
+    dofs = np.flatnonzero(np.isin(partner, partner[junction.dofs]))
+    if np.isfinite(values[dofs]).any():
+        values[dofs] = 0.0
 
 
 def _fix_partners(fixed: Any, values: Any, partner: Any) -> None:
@@ -219,6 +231,7 @@ def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0
             lambda y: spread.T @ system.jacobian(spread @ y + fixed + level) @ spread,
             free,
             lambda y: _throughput(system, constraints, spread @ y + fixed, level),
+            lambda y: round_off(spread.T @ system.jacobian(spread @ y + fixed + level), spread @ y + fixed),
         )
     above = spread @ free + fixed
     return ExcessState(system, constraints, above + level, system.residual(above, level), outcome)
