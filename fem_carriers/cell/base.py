@@ -54,7 +54,7 @@ class Equilibrium:
         return (n + p) / (n / self.Dp + p / self.Dn)
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Base:
     """A uniformly doped, quasi-neutral absorber.
 
@@ -101,6 +101,8 @@ class Base:
     radiative_cm3_per_s: str | float = SILICON
     temperature_K: float = STANDARD_TEMPERATURE_K
     material: str = SILICON
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Base")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
@@ -71,3 +72,14 @@ def name_of(problems: Complaints, what: str, value: object) -> bool:
     """Complain unless `value` is a usable name: an identifier-like string without dots."""
     good = isinstance(value, str) and value.replace("-", "_").isidentifier()
     return problems.unless(good, f"{what} name {value!r}", "letters, digits, _ and -, not starting with a digit")
+
+
+def stated_repr(self: Any) -> str:
+    """``Name(field=value, …)`` of a dataclass, with the fields that differ from their defaults only."""
+    shown = []
+    for f in dataclasses.fields(self):
+        value = getattr(self, f.name)
+        default = f.default_factory() if f.default_factory is not dataclasses.MISSING else f.default
+        if value != default:
+            shown.append(f"{f.name}={value!r}")
+    return f"{type(self).__name__}({', '.join(shown)})"

@@ -6,11 +6,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from ..errors import Complaints
+from . import checks
 from .patches import Dot, Patch, Polygon, Rectangle, Strip
 from .surface import Surface
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Face:
     """A face: its surface, and patches in the order they are laid on.
 
@@ -24,6 +25,8 @@ class Face:
 
     surface: Surface
     patches: Sequence[Patch] = ()
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Face")

@@ -45,7 +45,7 @@ class Source:
         object.__setattr__(self, "mask", check_masks(problems, self.mask))
 
 
-@dataclass(frozen=True, kw_only=True)
+@dataclass(frozen=True, repr=False, kw_only=True)
 class Sunlight(Source):
     """ASTM G173-03 global spectrum; see `Light.sunlight`."""
 
@@ -55,6 +55,8 @@ class Sunlight(Source):
     lowest_nm: float = 280.0
     highest_nm: float = 1450.0
     absorption: Any = None
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Light.sunlight")
@@ -70,7 +72,7 @@ class Sunlight(Source):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True, kw_only=True)
+@dataclass(frozen=True, repr=False, kw_only=True)
 class Monochromatic(Source):
     """Light of one wavelength; see `Light.monochromatic`."""
 
@@ -79,6 +81,8 @@ class Monochromatic(Source):
     absorption_per_cm: float | None = None
     reflectance: float = 0.0
     path: str = "single_pass"
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Light.monochromatic")
@@ -96,12 +100,14 @@ class Monochromatic(Source):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True, kw_only=True)
+@dataclass(frozen=True, repr=False, kw_only=True)
 class DepthProfile(Source):
     """A tabulated generation rate against depth; see `Light.depth_profile`."""
 
     depth_um: tuple[float, ...]
     rate_per_cm3_s: tuple[float, ...]
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Light.depth_profile")
@@ -118,7 +124,7 @@ class DepthProfile(Source):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True, kw_only=True)
+@dataclass(frozen=True, repr=False, kw_only=True)
 class UniformRate(Source):
     """The same generation rate everywhere (inside the mask)."""
 
@@ -130,6 +136,8 @@ class UniformRate(Source):
         """A mask or metal lies in a plane."""
         return bool(self.mask) or self.shaded
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints("Light.uniform")
         self._check(problems)
@@ -137,7 +145,7 @@ class UniformRate(Source):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True, kw_only=True)
+@dataclass(frozen=True, repr=False, kw_only=True)
 class RateFunction(Source):
     """A generation rate given as a function of position, cm⁻³s⁻¹ against µm."""
 
@@ -149,6 +157,8 @@ class RateFunction(Source):
         """A mask or metal lies in a plane."""
         return bool(self.mask) or self.shaded
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints("Light.function")
         self._check(problems)
@@ -156,11 +166,13 @@ class RateFunction(Source):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Light:
     """Sources of generation; lights add with ``+``."""
 
     sources: tuple[Source, ...]
+
+    __repr__ = checks.stated_repr
 
     def __add__(self, other: Light) -> Light:
         return Light(self.sources + other.sources)

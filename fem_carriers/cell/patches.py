@@ -65,7 +65,7 @@ class _Changes:
         check_shunt(problems, stated["shunt_ohm_cm2"])
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Strip(_Changes):
     """An infinitely long strip.
 
@@ -89,6 +89,8 @@ class Strip(_Changes):
     spacing_um: float | None = None
     opaque_width_um: float | None = None
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints(f"Strip {self.name!r}")
         checks.name_of(problems, "patch", self.name)
@@ -101,7 +103,7 @@ class Strip(_Changes):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Dot(_Changes):
     """A round patch, repeated on a grid if spacings are given.
 
@@ -126,6 +128,8 @@ class Dot(_Changes):
     staggered: bool = False
     opaque_diameter_um: float | None = None
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints(f"Dot {self.name!r}")
         checks.positive(problems, "diameter_um", self.diameter_um)
@@ -134,7 +138,7 @@ class Dot(_Changes):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Rectangle(_Changes):
     """A rectangle with sides along x and y, repeated on a grid if spacings are given.
 
@@ -160,6 +164,8 @@ class Rectangle(_Changes):
     opaque_width_um: float | None = None
     opaque_length_um: float | None = None
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints(f"Rectangle {self.name!r}")
         checks.positive(problems, "width_um", self.width_um)
@@ -170,7 +176,7 @@ class Rectangle(_Changes):
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Polygon(_Changes):
     """A polygon; it shades itself if it has a contact.
 
@@ -183,6 +189,8 @@ class Polygon(_Changes):
 
     name: str
     points_um: Sequence[tuple[float, float]] = field(default_factory=tuple)
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints(f"Polygon {self.name!r}")

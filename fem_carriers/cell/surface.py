@@ -10,7 +10,7 @@ from . import checks
 from .checks import Varying
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class DopedLayer:
     """A thin doped layer treated as a sheet.
 
@@ -31,6 +31,8 @@ class DopedLayer:
     absorbing_depth_um: float = 0.0
     collection: float = 1.0
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints("DopedLayer")
         checks.one_of(problems, "doping_type", self.doping_type, ("n", "p"))
@@ -41,7 +43,7 @@ class DopedLayer:
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Contact:
     """Metal on a surface; contacts of one name are one terminal.
 
@@ -56,6 +58,8 @@ class Contact:
     terminal: str
     contact_resistivity_mohm_cm2: float = 0.0
 
+    __repr__ = checks.stated_repr
+
     def __post_init__(self) -> None:
         problems = Complaints("Contact")
         checks.name_of(problems, "terminal", self.terminal)
@@ -64,7 +68,7 @@ class Contact:
         problems.raise_if_any()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Surface:
     """A surface: how it recombines, which layer it carries, whether metal touches it.
 
@@ -91,6 +95,8 @@ class Surface:
     shunt_ohm_cm2: float | None = None
     layer: DopedLayer | None = None
     contact: Contact | None = None
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("Surface")

@@ -18,7 +18,7 @@ from .surface import Surface
 SIDES = ("x_min", "x_max", "y_min", "y_max")
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class UnitCell:
     """One repeat unit of a cell, 2-D (cross section) or 3-D.
 
@@ -51,6 +51,8 @@ class UnitCell:
     sides: Mapping[str, Surface] = field(default_factory=dict)
     light: Light | None = None
     symmetry: str = "half"
+
+    __repr__ = checks.stated_repr
 
     def __post_init__(self) -> None:
         problems = Complaints("UnitCell")
