@@ -20,8 +20,10 @@ if TYPE_CHECKING:
 
 FLAT_SHARE = 0.005
 """The optimum counts as flat where the result stays within this share of the best."""
-CURRENT = "_mA_per_cm2"
-OPTICAL = ("shaded", "reflected", "escaped")
+CURRENT, POWER = "_mA_per_cm2", "_mW_per_cm2"
+OPTICAL_IN_POWER = ("shaded", "lost_in_layers")
+"""Reflected and escaped light hardly depends on the contacts and would hide the rest of a stack of powers."""
+OPTICAL = ("shaded", "reflected", "escaped", "lost_in_layers")
 COORDINATES = ("distance_um", "x_um", "y_um", "z_um")
 PICTURES = (".png", ".pdf", ".svg")
 _LOOK: Any = {
@@ -35,11 +37,12 @@ _LOOK: Any = {
 def plot_sweep(
     table: pd.DataFrame, x: str = "pitch_um", picture: str | Path | None = None, *, y: str | None = None
 ) -> Figure:
-    """Collected current against a variable, and below it where the rest went.
+    """Efficiency or collected current against a variable, and below it where the rest went.
 
     The best point is marked, and the range in which the result stays within 0.5 % of it (linear between points) is
     shaded. The losses are stacked: light not absorbed (shaded, reflected, escaped) and carriers lost
-    (columns ``lost_…_mA_per_cm2``). Rows without a result are marked by crosses at the lower edge.
+    (columns ``lost_…_mA_per_cm2``); or, with columns ``lost_…_mW_per_cm2``, power lost by shading, recombination and
+    transport at maximum power. Rows without a result are marked by crosses at the lower edge.
 
     Parameters
     ----------
@@ -50,7 +53,7 @@ def plot_sweep(
     picture : str or Path, optional
         File to save to: .png, .pdf or .svg.
     y : str, optional
-        Column to judge by; default is the sum of the columns ``collected_…_mA_per_cm2``.
+        Column to judge by; default is ``efficiency_percent`` or else the sum of ``collected_…_mA_per_cm2``.
 
     Returns
     -------
@@ -71,12 +74,14 @@ def plot_sweep(
     losses = _loss_columns(table)
     figure, axes = _figure(2 if losses else 1, (7.2, 6.6 if losses else 3.9), ratios=(1.0, 1.15)[: 2 if losses else 1])
     _draw_best(axes[0], at[good], value[good], (split_name(x)[1], unit))
-    axes[0].plot(at[~good], np.zeros((~good).sum()), "x", color=DARK, transform=axes[0].get_xaxis_transform(),
-                 clip_on=False, label="no result" if (~good).any() else None)  # fmt: skip
+    if (~good).any():
+        lower_edge = axes[0].get_xaxis_transform()
+        axes[0].plot(at[~good], np.zeros((~good).sum()), "x", color=DARK, transform=lower_edge, clip_on=False,
+                     label="no result")  # fmt: skip
     axes[0].set_ylabel(axis_label)
     if losses:
         _draw_losses(axes[1], at[good], table[good], losses)
-        axes[1].set_ylabel("losses (mA/cm²)")
+        axes[1].set_ylabel(f"losses ({'mW' if losses[0].endswith(POWER) else 'mA'}/cm²)")
     axes[-1].set_xlabel(label(x))
     for ax in axes:
         _legend_beside(ax)
@@ -85,6 +90,8 @@ def plot_sweep(
 
 def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], str, str]:
     """Values, axis label and unit of what the sweep is judged by."""
+    if y is None and "efficiency_percent" in table:
+        y = "efficiency_percent"
     if y is not None:
         return table[y].to_numpy(dtype=float), label(y), split_name(y)[1]
     collected = [c for c in table if str(c).startswith("collected_") and str(c).endswith(CURRENT)]
@@ -96,8 +103,12 @@ def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], st
 
 def _loss_columns(table: pd.DataFrame) -> list[str]:
     """Optical losses first, then carriers; columns that are zero throughout are left out."""
-    lost = [str(c) for c in table if str(c).startswith("lost_") and str(c).endswith(CURRENT)]
-    columns = [f"{o}{CURRENT}" for o in OPTICAL if f"{o}{CURRENT}" in table] + lost
+    unit = POWER if any(str(c).startswith("lost_") and str(c).endswith(POWER) for c in table) else CURRENT
+    shown = OPTICAL if unit == CURRENT else OPTICAL_IN_POWER
+    optical = [f"{o}{unit}" for o in shown if f"{o}{unit}" in table]
+    columns = optical + [
+        str(c) for c in table if str(c).startswith("lost_") and str(c).endswith(unit) and c not in optical
+    ]
     top = max((float(table[c].max()) for c in columns), default=0.0)
     return [c for c in columns if float(table[c].max()) > 1e-6 * top]
 
@@ -281,10 +292,20 @@ def _figure(rows: int, size: tuple[float, float], ratios: tuple[float, ...] | No
 def _legend_beside(ax: Axes) -> None:
     """Legend to the right of the axes, in the order in which areas are stacked (top first)."""
     handles, names = ax.get_legend_handles_labels()
-    ax.legend(handles[::-1], names[::-1], loc="upper left", bbox_to_anchor=(1.01, 1.0), frameon=False, fontsize=9)
+    legend = ax.legend(
+        handles[::-1], names[::-1], loc="upper left", bbox_to_anchor=(1.01, 1.0), fontsize=9, frameon=False
+    )
+    legend.set_in_layout(False)  # a legend taller than its axes would squeeze them; see _finish
 
 
 def _finish(figure: Figure, picture: Any) -> Figure:
+    """Leave room for the legends beside the axes, and save."""
+    legends = [legend for ax in figure.axes if (legend := ax.get_legend()) is not None and not legend.get_in_layout()]
+    engine = figure.get_layout_engine()
+    if legends and engine is not None:
+        figure.canvas.draw()
+        widest = max(legend.get_window_extent().width for legend in legends)
+        engine.set(rect=(0.0, 0.0, 1.0 - widest / figure.bbox.width - 0.015, 1.0))  # type: ignore[call-arg]
     if picture is not None:
         path = target("picture", picture, PICTURES)
         write_atomically(path, lambda p: figure.savefig(p, dpi=150))

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from ..errors import Complaints
 
 if TYPE_CHECKING:
+    from ..analysis.curve import CurrentVoltage
     from ..analysis.ledger import Ledger
     from ..analysis.solution import Solution
     from ..cell.unit_cell import UnitCell
@@ -86,6 +87,37 @@ def _plain(name: str) -> str:
     return re.sub(r"\W+", "_", name).strip("_")
 
 
+def curve_columns(curve: CurrentVoltage) -> dict[str, float]:
+    """Headline numbers of a current-voltage curve, and the loss budget at maximum power.
+
+    delivered = output + Σ lost; shaded, reflected, escaped and lost in layers are what that light would have delivered;
+    all in mW/cm² of cell area.
+
+    Parameters
+    ----------
+    curve : CurrentVoltage
+
+    Returns
+    -------
+    dict of str to float
+    """
+    columns = {str(name): float(value) for name, value in curve.summary.items()}
+    if curve.maximum_power is None:
+        return columns
+    solution = curve.maximum_power.solution
+    losses = solution.losses
+    columns |= {"delivered_mW_per_cm2": losses.delivered_mW_per_cm2}
+    columns |= {f"{name}_mW_per_cm2": value for name, value in losses.optical.items()}
+    for (kind, name), value in losses.rows.items():
+        if kind != "output":
+            columns[f"lost_{_plain(name)}_mW_per_cm2"] = value
+    return columns | {
+        "misclosure_mW_per_cm2": losses.misclosure_mW_per_cm2,
+        "unknowns": 2 * solution.problem.space.size,
+        "ledger_residual": solution.ledger.relative_residual,
+    }
+
+
 def result_columns(result: Any) -> dict[str, float]:
     """Numbers of whatever a computation returned.
 
@@ -104,6 +136,8 @@ def result_columns(result: Any) -> dict[str, float]:
     """
     if hasattr(result, "ledger") and hasattr(result, "optics"):
         return solution_columns(result)
+    if hasattr(result, "maximum_power"):
+        return curve_columns(result)
     numbers = result if isinstance(result, Mapping) else getattr(result, "summary", None)
     problems = Complaints("compute")
     if not problems.unless(hasattr(numbers, "items"), f"a result of type {type(result).__name__}", _ALLOWED):
