@@ -12,14 +12,14 @@ from pathlib import Path
 
 import fem_carriers as fc
 
-WIDTH_UM, RATE_PER_CM3_S = 200, 1e20
+WIDTH_UM, RATE_PER_CM3_S = 200, 1e16  # low injection, where D is constant
 
 
 def main():
     results = Path("results")
     results.mkdir(exist_ok=True)
     base = fc.Base(
-        "p", doping_per_cm3=1e16, thickness_um=50, lifetime_us=math.inf, auger=None, radiative_cm3_per_s=0,
+        "p", doping_per_cm3=1e17, thickness_um=50, lifetime_us=math.inf, auger=None, radiative_cm3_per_s=0,
         mobility_n_cm2_per_Vs=1200, mobility_p_cm2_per_Vs=400,
     )  # fmt: skip
     sink = fc.Surface(srv_cm_per_s=math.inf)

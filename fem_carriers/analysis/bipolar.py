@@ -146,6 +146,11 @@ def solve_bipolar(problem: Problem, voltage_V: float | Mapping[str, Condition] =
     good = isinstance(voltage_V, int | float) and math.isfinite(voltage_V)
     problems = Complaints("solve_bipolar")
     problems.unless(good, f"voltage_V = {voltage_V!r}", "a finite number, or a mapping of terminals")
+    conductors = walker.system.conductors
+    resistor = bool(conductors.majority_terminals) and not conductors.minority_terminals
+    given = f"voltage_V = {voltage_V!r} without a contact on a layer of the type opposite to the base"
+    named = ", ".join(f"{t!r}: ..." for t in conductors.majority_terminals)
+    problems.unless(voltage_V == 0 or not resistor, given, "a voltage for every terminal", f"{{{named}}}")
     problems.raise_if_any()
     return wrap(walker.at(bias_voltages(walker.system, float(voltage_V))))
 

@@ -72,7 +72,7 @@ class Conductors:
     @cached_property
     def junctions(self) -> list[Junction]:
         """Connected opposite-type layers."""
-        return find_junctions(self.problem, self.partner)
+        return find_junctions(self.problem, self.partner, several_terminals=True)
 
     @cached_property
     def layer(self) -> NDArray[np.bool_]:
@@ -182,17 +182,32 @@ class Conductors:
         for name in sorted(set(self.minority_terminals) & set(self.majority_terminals)):
             given = f"the terminal {name!r} on layers of both polarities (or on a layer and on the bare base)"
             problems.add(given, "one polarity per terminal; this would short the cell", "two terminal names")
-        if bool(self.minority_terminals) != bool(self.majority_terminals):
-            only = (self.minority_terminals or self.majority_terminals)[0]
-            kind = "majority" if self.minority_terminals else "minority"
-            given = f"the terminal {only!r} alone: no path for {kind} carriers to a terminal"
-            problems.add(given, "contacts for both carriers, or none at all", f"a contact for the {kind} carriers")
+        self._check_paths(problems)
         if (self.layer & self.bare).any():
             given = "bare metal (infinite srv) that touches a layer of the type opposite to the base"
             allowed = "no touching surfaces that impose different potentials: the current between them is infinite"
             problems.add(given, allowed, "a gap, or a finite srv_cm_per_s (1e7 is near the thermal velocity)")
+        self._check_references(problems)
         self._check_ideal(problems)
         problems.raise_if_any()
+
+    def _check_paths(self, problems: Complaints) -> None:
+        """Both carriers need a way in and out; majority carriers alone may flow between two contacts (a resistor)."""
+        minority, majority = self.minority_terminals, self.majority_terminals
+        if bool(minority) == bool(majority) or len(majority) > 1:
+            return
+        kind = "majority" if minority else "minority"
+        given = f"the terminal {(minority or majority)[0]!r} alone: no path for {kind} carriers to a terminal"
+        allowed = "contacts for both carriers, two or more that reach the base's majority carriers, or none at all"
+        problems.add(given, allowed, f"a contact for the {kind} carriers")
+
+    def _check_references(self, problems: Complaints) -> None:
+        """All pieces of a contact must store the layer's potential relative to one terminal."""
+        for metal in self.metals:
+            own = {j.terminal for j in self.junctions if metal.surface in j.surfaces}
+            if len(own) > 1:
+                given = f"the contact {metal.surface!r} on separate layers, one of which carries another terminal too"
+                problems.add(given, "layers with the same terminals", "contacts with different names on the layers")
 
     def _check_ideal(self, problems: Complaints) -> None:
         ideal = [m for m in self.metals if m.resistivity_ohm_cm2 == 0]

@@ -10,7 +10,7 @@ import numpy as np
 from ..errors import Complaints, MeshError
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterable, Mapping
 
     from numpy.typing import NDArray
 
@@ -25,7 +25,7 @@ class Junction:
     Parameters
     ----------
     terminal : str or None
-        The terminal of its contacts; None for a floating layer.
+        The terminal of its contacts (the first by name of several); None for a floating layer.
     surfaces : tuple of str
         The named surfaces it extends over.
     dofs : int array
@@ -74,7 +74,7 @@ def _order(x: Any, scale: float) -> Any:
     return np.lexsort(rounded)
 
 
-def find_junctions(problem: Problem, partner: NDArray[np.int64]) -> list[Junction]:
+def find_junctions(problem: Problem, partner: NDArray[np.int64], *, several_terminals: bool = False) -> list[Junction]:
     """Connected opposite-type layers, with the terminal that contacts each.
 
     Parameters
@@ -82,11 +82,14 @@ def find_junctions(problem: Problem, partner: NDArray[np.int64]) -> list[Junctio
     problem : Problem
     partner : (n,) int array
         From `periodic_map`.
+    several_terminals : bool
+        Whether a layer may carry contacts of several terminals.
 
     Raises
     ------
     InputError
-        A layer that carries contacts of several terminals: which takes the carriers depends on the sheet.
+        A layer that carries contacts of several terminals where that is not allowed: without a sheet resistance it is
+        open which of them takes the carriers.
     """
     from scipy.sparse import coo_matrix
     from scipy.sparse.csgraph import connected_components
@@ -109,7 +112,11 @@ def find_junctions(problem: Problem, partner: NDArray[np.int64]) -> list[Junctio
         name: label[partner[space.numbering.nodal_dofs[0][problem.mesh.cells.facets[0, f]]]]
         for name, f in facets.items()
     }
-    return [_junction(problem, facets, first, group) for group in np.unique(np.concatenate(list(first.values())))]
+    groups = np.unique(np.concatenate(list(first.values())))
+    found = [_junction(problem, facets, first, group) for group in groups]
+    if not several_terminals:
+        _refuse_several(problem, found)
+    return found
 
 
 def _junction(
@@ -117,13 +124,20 @@ def _junction(
 ) -> Junction:
     on = {name: facets[name][label[name] == group] for name in facets}
     on = {name: f for name, f in on.items() if f.size}
-    contacts = [problem.surfaces[name].contact for name in on]
-    terminals = sorted({c.terminal for c in contacts if c is not None})
-    if len(terminals) > 1:
-        problems = Complaints("solve_excess")
-        given = f"the layer over {', '.join(on)} with contacts of the terminals {', '.join(terminals)}"
-        allowed = "one terminal per connected layer in the excess-carrier form, which ignores sheet resistance"
-        problems.add(given, allowed, "the same terminal name for all contacts on it, or a gap in the layer")
-        problems.raise_if_any()
     dofs = np.unique(np.concatenate([problem.space.facet_dofs(f) for f in on.values()]))
-    return Junction(terminals[0] if terminals else None, tuple(on), dofs)
+    return Junction(next(iter(_terminals(problem, on)), None), tuple(on), dofs)
+
+
+def _terminals(problem: Problem, surfaces: Iterable[str]) -> list[str]:
+    contacts = [problem.surfaces[name].contact for name in surfaces]
+    return sorted({c.terminal for c in contacts if c is not None})
+
+
+def _refuse_several(problem: Problem, junctions: list[Junction]) -> None:
+    problems = Complaints("solve_excess")
+    for junction in junctions:
+        terminals = _terminals(problem, junction.surfaces)
+        given = f"the layer over {', '.join(junction.surfaces)} with contacts of the terminals {', '.join(terminals)}"
+        allowed = "one terminal per connected layer in the excess-carrier form, which ignores sheet resistance"
+        problems.unless(len(terminals) <= 1, given, allowed, "the same terminal name for all contacts on it, or a gap")
+    problems.raise_if_any()

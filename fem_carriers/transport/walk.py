@@ -54,7 +54,7 @@ class Walker:
 
     def _first(self, voltages: Mapping[str, float]) -> BipolarState:
         """A state that is solved from a uniform splitting: near the implied voltage, or at the bias asked for."""
-        implied = implied_voltage_V(self.system)
+        implied = self._implied()
         asked = self._bias(voltages)
         error: SolverError | None = None
         for lift in (0.0, 0.01, -0.02, 0.03, -0.05, 0.06, -0.1):
@@ -65,6 +65,15 @@ class Walker:
                 error = failed
         assert error is not None
         raise error
+
+    def _implied(self) -> float:
+        """The implied voltage; with terminals that take what does not recombine, a splitting at which Δn is M0."""
+        try:
+            return implied_voltage_V(self.system)
+        except SolverError:
+            if not self.system.conductors.metals:
+                raise
+            return float(self.system.roles.splitting(self.system.roles.M0))
 
     def _uniform(self, bias: float) -> Unknowns:
         n = self.system.space.size
@@ -156,6 +165,8 @@ def exhausted_contact(state: BipolarState) -> str:
 def implied_voltage_V(system: BipolarSystem) -> float:
     """Uniform splitting at which ∫ R + ∮ U balances ∫ G; 0 without light.
 
+    Bare metal takes what diffuses to it, Dm Δn/l per area with l the volume over its area.
+
     Raises
     ------
     SolverError
@@ -167,11 +178,13 @@ def implied_voltage_V(system: BipolarSystem) -> float:
     if generated <= 0:
         return 0.0
     one: NDArray[np.float64] = np.ones(system.space.size)
+    bare = [system.space.surfaces[n].dx.sum() for n, s in system.problem.surfaces.items() if s.pins_to_zero]
+    to_bare: float = system.roles.Dm * sum(bare) ** 2 / system.space.bulk.dx.sum()
 
     def excess(u: float) -> float:
         dn = system.roles.density(u)[0] * one
         lost = sum(system.bulk_rates(dn).values()) + sum(system.surface_rates(dn).values())
-        return lost - generated
+        return float(lost + to_bare * dn[0] - generated)
 
     high = 0.2
     while excess(high) <= 0:

@@ -144,7 +144,7 @@ def test_first_coefficients_of_the_motz_problem():
 
 def test_l_shaped_domain():
     """(−1, 1)² without a quadrant, −Δu = 1, u = 0 all round: ∫ u = ∫ |∇u|² = 0.2140758."""
-    axis = 100 * graded_axis(-1, 1, [(0, 1e-4), (-1, 0.05), (1, 0.05)], 1.35, 0.15)
+    axis = 100 * graded_axis(-1, 1, [(0, 1e-5), (-1, 0.05), (1, 0.05)], 1.25, 0.1)
     square = box_mesh("quad", axis, axis).cells
     centre = square.p[:, square.t].mean(axis=1)
     cells = square.remove_elements(np.flatnonzero((centre > 0).all(axis=0)))
