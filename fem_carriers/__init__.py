@@ -39,6 +39,9 @@ _WHERE = {
     "write_fields": "files.fields",
     "write_table": "files.tables",
     "sweep": "studies.sweep",
+    "best_point": "studies.best",
+    "changed": "studies.paths",
+    "known_paths": "studies.paths",
     "view": "output.window",
     "plot_sweep": "output.plots",
     "plot_curve": "output.power",
@@ -49,6 +52,7 @@ _WHERE = {
     "MeshError": "errors",
     "SolverError": "errors",
     "BalanceError": "errors",
+    "SweepInterrupted": "errors",
     "ModelWarning": "errors",
     "FemCarriersError": "errors",
 }

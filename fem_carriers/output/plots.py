@@ -9,7 +9,9 @@ import numpy as np
 
 from ..errors import Complaints
 from ..files.atomic import target, write_atomically
-from .labels import label, split_name, words
+from ..studies.best import best_point
+from ..units import split_name
+from .labels import label, words
 from .style import DARK, OKABE_ITO, log_by_default
 
 if TYPE_CHECKING:
@@ -18,8 +20,6 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
     from numpy.typing import NDArray
 
-FLAT_SHARE = 0.005
-"""The optimum counts as flat where the result stays within this share of the best."""
 CURRENT, POWER = "_mA_per_cm2", "_mW_per_cm2"
 OPTICAL_IN_POWER = ("shaded", "lost_in_layers")
 """Reflected and escaped light hardly depends on the contacts and would hide the rest of a stack of powers."""
@@ -39,10 +39,10 @@ def plot_sweep(
 ) -> Figure:
     """Efficiency or collected current against a variable, and below it where the rest went.
 
-    The best point is marked, and the range in which the result stays within 0.5 % of it (linear between points) is
-    shaded. The losses are stacked: light not absorbed (shaded, reflected, escaped) and carriers lost
-    (columns ``lost_…_mA_per_cm2``); or, with columns ``lost_…_mW_per_cm2``, power lost by shading, recombination and
-    transport at maximum power. Rows without a result are marked by crosses at the lower edge.
+    The best point is marked, and the range in which the result stays within 0.5 % of it (see `best_point`) is shaded.
+    The losses are stacked: light not absorbed (shaded, reflected, escaped) and carriers lost (columns
+    ``lost_…_mA_per_cm2``); or, with columns ``lost_…_mW_per_cm2``, power lost by shading, recombination and transport
+    at maximum power. Rows without a result are marked by crosses at the lower edge.
 
     Parameters
     ----------
@@ -113,43 +113,16 @@ def _loss_columns(table: pd.DataFrame) -> list[str]:
     return [c for c in columns if float(table[c].max()) > 1e-6 * top]
 
 
-def flat_range(x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[float, float]:
-    """Range of rising `x` around the largest `y` in which y, linear between points, is within 0.5 % of it."""
-    best = int(np.argmax(y))
-    level = y[best] - FLAT_SHARE * abs(y[best])
-
-    def end(step: int) -> float:
-        i = best
-        while 0 <= i + step < len(x) and y[i + step] >= level:
-            i += step
-        j = i + step
-        if not 0 <= j < len(x):
-            return float(x[i])
-        return float(x[i] + (x[j] - x[i]) * (y[i] - level) / (y[i] - y[j]))
-
-    return end(-1), end(1)
-
-
 def _draw_best(ax: Axes, x: NDArray[np.float64], y: NDArray[np.float64], units: tuple[str, str]) -> None:
-    best = int(np.argmax(y))
-    low, high = flat_range(x, y)
-    ax.axvspan(
-        low,
-        high,
-        color=OKABE_ITO[4],
-        alpha=0.22,
-        linewidth=0,
-        label=f"within 0.5 %:\n{low:.4g} to {high:.4g} {units[0]}",
-    )
+    """The curve, its best point and flat range as `best_point` finds them."""
+    import pandas as pd
+
+    best = best_point(pd.DataFrame({"x": x, "y": y}).drop_duplicates("x"), "x", "y")
+    text = f"within {best.within_percent:g} %:\n{best.flat_from:.4g} to {best.flat_to:.4g} {units[0]}"
+    ax.axvspan(best.flat_from, best.flat_to, color=OKABE_ITO[4], alpha=0.22, linewidth=0, label=text)
     ax.plot(x, y, "-o", color=OKABE_ITO[0], markersize=4)
-    ax.plot(
-        x[best],
-        y[best],
-        "D",
-        color=OKABE_ITO[5],
-        markersize=8,
-        label=f"best: {y[best]:.4g} {units[1]}\nat {x[best]:.4g} {units[0]}",
-    )
+    text = f"best: {best.value:.4g} {units[1]}\nat {best.location:.4g} {units[0]}"
+    ax.plot(best.location, best.value, "D", color=OKABE_ITO[5], markersize=8, label=text)
     ax.margins(y=0.12)
 
 

@@ -8,16 +8,11 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..errors import Complaints
+from ..units import split_name
 
 if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
-
-UNITS = {
-    "ohm_per_sq": "Ω/sq", "mohm_cm2": "mΩ·cm²", "mA_per_cm2": "mA/cm²", "mW_per_cm2": "mW/cm²", "fA_per_cm2": "fA/cm²",
-    "ohm_cm": "Ω·cm", "cm_per_s": "cm/s", "per_cm3": "cm⁻³", "percent": "%", "um": "µm", "us": "µs", "V": "V", "K": "K",
-}  # fmt: skip
-"""What stands at the end of a column's name, longer endings first."""
 
 
 @dataclass(frozen=True)
@@ -51,11 +46,14 @@ class Best:
     flat_to_is_end: bool
 
     def __str__(self) -> str:
-        name, unit = _split(self.variable)
-        value_unit = _split(self.quantity)[1]
+        name, unit = split_name(self.variable)
+        value_unit = split_name(self.quantity)[1]
         low = f"{self.flat_from:.4g}" + (" (end of the range)" if self.flat_from_is_end else "")
         high = f"{self.flat_to:.4g} {unit}".rstrip() + (" (end of the range)" if self.flat_to_is_end else "")
-        text = f"best {name} {self.location:.4g} {unit}".rstrip() + f": {self.value:.4g} {value_unit}".rstrip()
+        text = (
+            f"best {name.replace('_', ' ')} {self.location:.4g} {unit}".rstrip()
+            + f": {self.value:.4g} {value_unit}".rstrip()
+        )
         text += f"; within {self.within_percent:g} % from {low} to {high}"
         return f"{text}; the best is at the end of the swept range and may lie beyond" if self.at_end else text
 
@@ -144,11 +142,3 @@ def _reach(x: Any, y: Any, best: int, level: float) -> tuple[float, bool]:
             return min(inside), False
     share = (y[j - 1] - level) / (y[j - 1] - y[j])
     return float(x[j - 1] + share * (x[j] - x[j - 1])), False
-
-
-def _split(column: str) -> tuple[str, str]:
-    """Name in words, and unit, of a column."""
-    for ending, unit in UNITS.items():
-        if column.endswith(f"_{ending}"):
-            return column.removesuffix(f"_{ending}").replace("_", " "), unit
-    return column.replace("_", " "), ""

@@ -164,7 +164,7 @@ def _starting(hidden: bool) -> Iterator[None]:
 
 def _begin() -> None:
     """In a new process: Ctrl-C is the parent's business, and one thread is enough."""
-    from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
+    from threadpoolctl import threadpool_limits
 
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     threadpool_limits(1)

@@ -2,11 +2,11 @@
 
     python tests/benchmarks/random_designs.py [number] [--hard] [--seed N]
 
-Every parameter is drawn log-uniformly: lifetime 0.1 µs–30 ms, doping 1e14–1e18 cm⁻³, J0 0.1–5000 fA/cm², sheet resistance
-10–5000 Ω/sq, contact resistivity 0.01–100 mΩ·cm², S 0 or 1–1e7 cm/s, 0.01–10 suns, 250–400 K within the models' ranges,
-pitch 100–2000 µm, finger 0.5–30 % of it; front junction with fingers, or interdigitated rear contacts. `--hard` draws
-the doping from 1e10 and up to 100 suns. At least 99.5 % (hard: 90 %) must give a curve; all others must be refused with a
-named reason.
+Every parameter is drawn log-uniformly: lifetime 0.1 µs–30 ms, doping 1e14–1e18 cm⁻³, J0 0.1–5000 fA/cm², sheet
+resistance 10–5000 Ω/sq, contact resistivity 0.01–100 mΩ·cm², S 0 or 1–1e7 cm/s, 0.01–10 suns, pitch 100–2000 µm, finger
+0.5–30 % of it; the temperature uniformly from 275 to 360 K, where all silicon models hold. Front junction with fingers,
+or interdigitated rear contacts. `--hard` draws the doping from 1e10 and up to 100 suns. At least 99.5 % (hard: 90 %)
+must give a curve; all others must be refused with a named reason.
 """
 
 import argparse
@@ -82,7 +82,7 @@ def random_cell(seed: int, hard: bool) -> fc.UnitCell:
 
 
 def outcome(job: tuple[int, bool]) -> tuple[int, str]:
-    """"curve", or the named reason of the refusal; anything else is a failure of the test."""
+    """ "curve", or the named reason of the refusal; anything else is a failure of the test."""
     warnings.simplefilter("ignore", fc.ModelWarning)
     seed, hard = job
     try:
