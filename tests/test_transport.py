@@ -198,6 +198,17 @@ def test_ledger_closes_in_random_cells(seed):
     assert "front.finger" in solution.ledger.table.loc["surface"].index
 
 
+@pytest.mark.filterwarnings("ignore::fem_carriers.ModelWarning")
+@pytest.mark.parametrize("voltage_V", [0.6, 0.65, 0.7])
+def test_high_injection_beside_a_depleted_region(voltage_V):
+    """Δn falls from 1e16 within a few µm on a coarse mesh and undershoots zero, where SRH recombination has a pole."""
+    base = fc.Base("p", doping_per_cm3=1.6e14, thickness_um=265, tau_n0_us=0.15, tau_p0_us=0.27)
+    front = fc.Face(fc.Surface(), [fc.Strip("f", 30, layer=fc.DopedLayer("n", 100), contact=fc.Contact("t"))])
+    solution = fc.solve_excess(fc.problem(fc.UnitCell(base, 134, front=front)), voltage_V)
+    assert solution.outcome.steps <= 15
+    assert abs(solution.ledger.relative_residual) <= 1e-10
+
+
 @pytest.mark.parametrize("lifetime_us", [1e2, 1e4, 1e6, 1e8, math.inf])
 @pytest.mark.parametrize("voltage_V", [0.05, 0.5])
 def test_dark_current_of_a_nearly_uniform_density(lifetime_us, voltage_V):

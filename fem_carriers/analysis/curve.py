@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
@@ -169,7 +169,7 @@ class _Tracer:
 
     def open_circuit(self) -> Point:
         """J = 0 by Newton's method from the implied voltage, kept between voltages of either sign of J."""
-        return self._root(implied_voltage_V(self.walker.system), lambda p: (p.current_mA_per_cm2, p.slope_mA_per_cm2_V))
+        return self.root(implied_voltage_V(self.walker.system), lambda p: (p.current_mA_per_cm2, p.slope_mA_per_cm2_V))
 
     def maximum_power(self, voc: float) -> Point:
         """d(VJ)/dV = J + V dJ/dV = 0 by the secant method, kept between bounds."""
@@ -194,11 +194,12 @@ class _Tracer:
             return known[best], known[min(best + 1, len(known) - 1)]
         return known[best - 1], known[best]
 
-    def _root(self, voltage_V: float, function: object) -> Point:
+    def root(self, voltage_V: float, function: Callable[[Point], tuple[float, float]]) -> Point:
+        """Where a falling function of the voltage vanishes; it gives its value and slope at a point."""
         low, high = -math.inf, math.inf
         for _ in range(LARGEST_TRIES):
             point = self.at(voltage_V)
-            value, slope = function(point)  # type: ignore[operator]
+            value, slope = function(point)
             low, high = (voltage_V, high) if value > 0 else (low, voltage_V)
             step = -value / slope if slope < 0 else math.copysign(0.05, value)
             step = max(min(step, 0.05), -0.05)
@@ -207,7 +208,7 @@ class _Tracer:
             voltage_V = voltage_V + step
             if not low < voltage_V < high:
                 voltage_V = 0.5 * (low + high)
-        raise SolverError("not converged", "The open-circuit voltage did not settle.")
+        raise SolverError("not converged", "A voltage of the curve did not settle.")
 
 
 def current_voltage(problem: Problem, voltages_V: Sequence[float] | None = None) -> CurrentVoltage:
@@ -248,6 +249,44 @@ def current_voltage(problem: Problem, voltages_V: Sequence[float] | None = None)
     best = tracer.maximum_power(open_circuit.voltage_V)
     wanted = sorted({*chosen, 0.0, open_circuit.voltage_V, best.voltage_V})
     return CurrentVoltage(tuple(tracer.points[v] for v in wanted), short_circuit, open_circuit, best, power)
+
+
+def series_resistance_two_lights_ohm_cm2(problem: Problem, dimmed: float = 0.9) -> float:
+    """Lumped series resistance from two light levels, at maximum power of the brighter one.
+
+    With ΔJ = Jsc − J at maximum power, the same ΔJ below the dimmed short-circuit current lies at the voltage V′, and
+    Rs = (V′ − V)/(J − J′): the junction is at the same voltage in both, the current through the resistance is not.
+
+    Parameters
+    ----------
+    problem : Problem
+        Under light, with contacts for both carriers.
+    dimmed : float
+        Factor on the light for the second level, between 0 and 1.
+
+    Returns
+    -------
+    float
+        Ω·cm².
+
+    References
+    ----------
+    M. Wolf and H. Rauschenbach, Adv. Energy Convers. 3, 455 (1963) [from memory].
+    """
+    problems = Complaints("series_resistance_two_lights_ohm_cm2")
+    problems.unless(0 < dimmed < 1, f"dimmed = {dimmed!r}", "a factor between 0 and 1", "0.9")
+    problems.unless(problem.light is not None, "a problem in the dark", "a problem under light")
+    problems.raise_if_any()
+    assert problem.light is not None
+    bright = current_voltage(problem)
+    assert bright.maximum_power is not None
+    best = bright.maximum_power
+    tracer = _Tracer(problem.changed(light=problem.light.scaled(dimmed)))
+    open_circuit = tracer.open_circuit()
+    target = tracer.at(0.0).current_mA_per_cm2 - (bright.jsc_mA_per_cm2 - best.current_mA_per_cm2)
+    start = min(best.voltage_V, open_circuit.voltage_V)
+    other = tracer.root(start, lambda p: (p.current_mA_per_cm2 - target, p.slope_mA_per_cm2_V))
+    return 1e3 * (other.voltage_V - best.voltage_V) / (best.current_mA_per_cm2 - other.current_mA_per_cm2)
 
 
 def _rise(point: Point) -> float:

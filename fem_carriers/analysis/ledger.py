@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import BalanceError, Complaints
+from ..transport.bipolar_newton import BipolarState
 from ..transport.excess import ExcessSystem
 from ..transport.newton import round_off
 from ..units import MA
@@ -17,7 +18,7 @@ if TYPE_CHECKING:
     from ..transport.state import SolvedState
 
 LARGEST_MISCLOSURE = 1e-10
-"""Of the larger of generation and total recombination; a solution beyond it is refused."""
+"""Of the largest of generation, total recombination and terminal current; a solution beyond it is refused."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -135,7 +136,10 @@ def make_ledger(state: SolvedState) -> Ledger:
 
 def _allowed(ledger: Ledger, state: SolvedState, to_current: float) -> float:
     """Largest misclosure, mA/cm²; where drift holds diffusion in balance, at least the round-off of the two."""
-    allowed, system = LARGEST_MISCLOSURE * ledger.scale_mA_per_cm2, state.system
+    scale, system = ledger.scale_mA_per_cm2, state.system
+    if isinstance(state, BipolarState):  # between contacts of one polarity a current flows that is no row here
+        scale = max([scale, *(abs(i) / system.problem.cell_area_cm2 / MA for i in state.terminal_currents.values())])
+    allowed = LARGEST_MISCLOSURE * scale
     if not isinstance(system, ExcessSystem) or system.drift is None:
         return allowed
     return max(allowed, round_off(system.jacobian(state.dn), state.dn) * to_current)

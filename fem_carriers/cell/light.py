@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -177,6 +177,13 @@ class Light:
     def __add__(self, other: Light) -> Light:
         return Light(self.sources + other.sources)
 
+    def scaled(self, factor: float) -> Light:
+        """The same light, stronger or weaker by a factor."""
+        problems = Complaints("Light.scaled")
+        checks.positive(problems, "factor", factor, zero=True)
+        problems.raise_if_any()
+        return Light(tuple(_scaled(source, factor) for source in self.sources))
+
     @staticmethod
     def sunlight(
         reflectance: float | tuple[ArrayLike, ArrayLike] = 0.0,
@@ -265,6 +272,24 @@ class Light:
     def function(rate: Callable[..., Any], *, mask: Any = (), shaded: bool = False) -> Light:
         """A generation rate ``f(x_um, y_um, z_um)`` in cm⁻³s⁻¹ (arrays in and out; y_um is 0 in 2-D)."""
         return Light((RateFunction(rate=rate, mask=mask, shaded=shaded),))
+
+
+@dataclass(frozen=True)
+class _ScaledRate:
+    rate: Callable[..., Any]
+    factor: float
+
+    def __call__(self, x_um: Any, y_um: Any, z_um: Any) -> Any:
+        return self.factor * self.rate(x_um, y_um, z_um)
+
+
+def _scaled(source: Source, factor: float) -> Source:
+    if isinstance(source, RateFunction):
+        return replace(source, rate=_ScaledRate(source.rate, factor))
+    if isinstance(source, DepthProfile):
+        return replace(source, rate_per_cm3_s=tuple(factor * r for r in source.rate_per_cm3_s))
+    strength = {Sunlight: "suns", Monochromatic: "flux_per_cm2_s", UniformRate: "rate_per_cm3_s"}[type(source)]
+    return replace(source, **{strength: factor * getattr(source, strength)})
 
 
 def _reflectance(problems: Complaints, value: Any) -> Any:

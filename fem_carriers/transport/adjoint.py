@@ -13,7 +13,6 @@ import numpy as np
 
 from ..errors import Complaints
 from .balance import mass_matrix
-from .coefficients import diffusivity
 from .linear import Factorization
 from .steady import fixed_weights
 
@@ -65,7 +64,7 @@ def frozen_matrix(state: ExcessState) -> Any:
     if system.drift is not None:
         carried = system.drift.vector * _ratio(*system.drift.share(values), values)
         along = system.drift.upwind if system.drift.needs_upwinding else None
-    D = diffusivity(values, system.problem.equilibrium)[0]
+    D = system.diffusivity(values)[0]
     matrix = bulk.matrix(D, carried, _ratio(*system.rate(values), values), along)
     for name, law in system.surface_laws.items():
         basis = system.space.surfaces[name]

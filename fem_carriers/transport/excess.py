@@ -10,7 +10,8 @@ The test functions sum to one, so the sum of all equations is the carrier balanc
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -18,6 +19,7 @@ import numpy as np
 from .balance import CarrierBalance
 from .coefficients import diffusivity
 from .drift import Drift
+from .recombination import Channel, Law, bulk_channels
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -36,6 +38,27 @@ class ExcessSystem(CarrierBalance):
 
     drift: Drift | None = None
 
+    @property
+    def lowest(self) -> float:
+        """Δn where one carrier is exhausted. Iterates and coarse meshes go below; laws have their poles there."""
+        return -min(self.problem.equilibrium.n0, self.problem.equilibrium.p0)
+
+    @cached_property
+    def channels(self) -> list[Channel]:
+        """Bulk recombination channels, linear below `lowest`."""
+        return [replace(c, law=continued(c.law, self.lowest)) for c in bulk_channels(self.problem)]
+
+    @cached_property
+    def surface_laws(self) -> dict[str, Law]:
+        """Recombination laws of the surfaces, linear below `lowest`."""
+        return {name: continued(law, self.lowest) for name, law in super().surface_laws.items()}
+
+    def diffusivity(self, values: Any) -> tuple[Any, Any]:
+        """D and dD/dΔn, constant below `lowest`."""
+        inside = np.real(values) > self.lowest
+        D, slope = diffusivity(np.where(inside, values, self.lowest), self.problem.equilibrium)
+        return D, np.where(inside, slope, 0.0)
+
     def residual(self, dn: NDArray[Any], level: float = 0.0) -> NDArray[Any]:
         """F(level + Δn) = ∫ Γ·∇v + ∫ R v + ∮ U v − ∫ G v, shape (n,); Δn may be complex.
 
@@ -50,7 +73,7 @@ class ExcessSystem(CarrierBalance):
         """dF/dΔn as a sparse matrix (n, n): ∫ (D ∇u + u ∂Γ/∂Δn)·∇v + ∫ R′ u v + ∮ U′ u v."""
         bulk = self.space.bulk
         values = bulk.values(dn)
-        D, dD = diffusivity(values, self.problem.equilibrium)
+        D, dD = self.diffusivity(values)
         carried = None if self._constant_diffusivity else dD * bulk.gradients(dn)
         along = None
         if self.drift is not None:
@@ -66,9 +89,20 @@ class ExcessSystem(CarrierBalance):
 
     def flux(self, values: Any, gradients: Any) -> Any:
         """Γ at the quadrature points, shape (dimension, n_cells, n_points), 1/(cm² s)."""
-        flux = diffusivity(values, self.problem.equilibrium)[0] * gradients
+        flux = self.diffusivity(values)[0] * gradients
         if self.drift is not None:
             flux = flux + self.drift.flux(values)
             if self.drift.needs_upwinding:
                 flux = flux + self.drift.upwind_flux(gradients)
         return flux
+
+
+def continued(law: Law, lowest: float) -> Law:
+    """The law, continued by its tangent below a density."""
+
+    def continued_law(dn: Any) -> tuple[Any, Any]:
+        inside = np.where(np.real(dn) > lowest, dn, lowest)
+        rate, slope = law(inside)
+        return rate + slope * (dn - inside), slope
+
+    return continued_law

@@ -229,7 +229,7 @@ def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0
         free, outcome = newton(
             lambda y: spread.T @ system.residual(spread @ y + fixed, level),
             lambda y: spread.T @ system.jacobian(spread @ y + fixed + level) @ spread,
-            free - level if constraints.fixed.any() else free,
+            free,
             lambda y: _throughput(system, constraints, spread @ y + fixed, level),
             lambda y: round_off(spread.T @ system.jacobian(spread @ y + fixed + level), spread @ y + fixed),
         )
@@ -247,7 +247,7 @@ def _throughput(system: ExcessSystem, constraints: Constraints, above: NDArray[n
 
 
 def _level(system: ExcessSystem, constraints: Constraints) -> float:
-    """A density that is never far away: the one fixed everywhere, or where recombination balances generation; else 0."""
+    """Uniform density to start from: the one fixed everywhere, or where recombination balances generation; or 0."""
     if constraints.fixed.any():
         values = constraints.values[constraints.fixed]
         return float(values[0]) if np.ptp(values) == 0 and system.drift is None else 0.0

@@ -170,13 +170,13 @@ def test_half_lit_slab_with_ambipolar_diffusion(kind, rate):
     base = unequal_base(kind, thickness_um=10)
     light = fc.Light.uniform(rate, mask=fc.HalfPlane(100))
     cell = cell_of(base, 200, 2, sides={"x_min": BARE_METAL, "x_max": BARE_METAL}, light=light)
-    solution = solve_bipolar(fc.problem(cell, first_step_um=0.5))
+    solution = solve_bipolar(fc.problem(cell, first_step_um=0.1, growth=1.6).refined())
     eq = base.equilibrium()
     ambipolar = lambda d: (eq.n0 + eq.p0 + 2 * d) / ((eq.n0 + d) / eq.Dp + (eq.p0 + d) / eq.Dn)
     top = solution.at(point(2, 75, 5))[0]
     found = quad(ambipolar, 0, top, epsrel=1e-10, limit=200)[0]
-    assert found == pytest.approx(9 * rate * 200e-4**2 / 128, rel=1e-6)
-    assert solution.ledger.share("x_min") == pytest.approx(3 / 4, rel=1e-6)
+    assert found == pytest.approx(9 * rate * 200e-4**2 / 128, rel=3e-6)
+    assert solution.ledger.share("x_min") == pytest.approx(3 / 4, rel=3e-7)
 
 
 @pytest.mark.parametrize("kind", ["p", "n"])
@@ -186,12 +186,11 @@ def test_lit_piece_without_contacts_is_the_excess_carrier_form(kind, suns):
     wafer = fc.Base(kind, doping_per_cm3=1e15, thickness_um=160, tau_n0_us=300, tau_p0_us=100)
     rear = fc.Face(fc.Surface(srv_cm_per_s=10), [fc.Strip("worn", 200, srv_cm_per_s=1e5)])
     cell = fc.UnitCell(wafer, 1000, front=fc.Surface(J0_fA_per_cm2=10), rear=rear, light=light)
-    problem = fc.problem(cell)
+    problem = fc.problem(cell, first_step_um=0.1, growth=1.6).refined()
     bipolar, excess = solve_bipolar(problem), fc.solve_excess(problem)
-    scale = excess.state.dn.max()
-    assert np.abs(bipolar.state.dn - excess.state.dn).max() < 1e-6 * scale
-    for key, share in excess.ledger.rows.items():
-        assert bipolar.ledger.rows[key] == pytest.approx(share, rel=1e-5), key
+    assert np.abs(bipolar.state.dn - excess.state.dn).max() < 3e-6 * excess.state.dn.max()
+    for key, rate in excess.ledger.rows.items():
+        assert bipolar.ledger.rows[key] == pytest.approx(rate, rel=3e-6), key
 
 
 @pytest.mark.parametrize("kind", ["p", "n"])
