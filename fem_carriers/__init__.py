@@ -32,7 +32,7 @@ _WHERE = {
     "solve_bipolar": "analysis.bipolar",
     "Through": "analysis.terminals",
     "current_voltage": "analysis.curve",
-    "series_resistance_two_lights_ohm_cm2": "analysis.curve",
+    "series_resistance_two_lights_ohm_cm2": "analysis.series_resistance",
     "collection_probability": "analysis.solve",
     "lateral_losses": "analysis.profiles",
     "Solution": "analysis.solution",

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..errors import Complaints
 from . import checks
+from .light_tables import read_profile, reflectance_table
 from .masks import check_masks
 
 if TYPE_CHECKING:
@@ -61,7 +62,7 @@ class Sunlight(Source):
     def __post_init__(self) -> None:
         problems = Complaints("Light.sunlight")
         self._check(problems)
-        object.__setattr__(self, "reflectance", _reflectance(problems, self.reflectance))
+        object.__setattr__(self, "reflectance", reflectance_table(problems, self.reflectance))
         checks.one_of(problems, "path", self.path, PATHS)
         checks.positive(problems, "suns", self.suns, zero=True)
         if checks.positive(problems, "lowest_nm", self.lowest_nm) and checks.positive(
@@ -93,7 +94,7 @@ class Monochromatic(Source):
         for name, value in given.items():
             if value is not None:
                 checks.positive(problems, name, value)
-        _reflectance(problems, self.reflectance)
+        reflectance_table(problems, self.reflectance)
         checks.one_of(problems, "path", self.path, PATHS)
         allowed = "a wavelength_nm with path 'lambertian', which needs the refractive index"
         problems.unless(self.path != "lambertian" or self.wavelength_nm is not None, "absorption_per_cm", allowed)
@@ -260,7 +261,7 @@ class Light:
         rate_per_cm3_s : sequence, if `depth_um` is one
         """
         if rate_per_cm3_s is None:
-            depth_um, rate_per_cm3_s = _read_profile(depth_um)
+            depth_um, rate_per_cm3_s = read_profile(depth_um)
         return Light((DepthProfile(depth_um=depth_um, rate_per_cm3_s=rate_per_cm3_s, enters=enters, mask=mask),))  # type: ignore[arg-type]
 
     @staticmethod
@@ -290,36 +291,3 @@ def _scaled(source: Source, factor: float) -> Source:
         return replace(source, rate_per_cm3_s=tuple(factor * r for r in source.rate_per_cm3_s))
     strength = {Sunlight: "suns", Monochromatic: "flux_per_cm2_s", UniformRate: "rate_per_cm3_s"}[type(source)]
     return replace(source, **{strength: factor * getattr(source, strength)})
-
-
-def _reflectance(problems: Complaints, value: Any) -> Any:
-    """A constant in [0, 1], or a table (wavelength_nm, reflectance) as tuples."""
-    if not isinstance(value, tuple | list):
-        problems.unless(checks.is_number(value) and 0 <= value <= 1, f"reflectance = {value!r}", "0 to 1, or a table")
-        return value
-    if not problems.unless(len(value) == 2, "reflectance table", "a pair (wavelength_nm, reflectance)"):
-        return value
-    wavelength, share = (tuple(float(v) for v in column) for column in value)
-    rising = len(wavelength) == len(share) >= 2 and all(b > a for a, b in pairwise(wavelength))
-    problems.unless(rising, "reflectance table", "rising wavelengths, as many shares as wavelengths")
-    problems.unless(all(0 <= s <= 1 for s in share), "reflectance table", "shares from 0 to 1")
-    return wavelength, share
-
-
-def _read_profile(path: Any) -> tuple[Sequence[float], Sequence[float]]:
-    import pandas as pd
-
-    problems = Complaints(f"depth profile {path!s}")
-    wanted = ["depth_um", "rate_per_cm3_s"]
-    try:
-        table = pd.read_csv(path)
-    except Exception as error:
-        problems.add(f"a file that cannot be read as CSV ({error})", "columns depth_um,rate_per_cm3_s")
-        problems.raise_if_any()
-    given = f"columns {', '.join(map(str, table.columns))}"
-    if problems.unless(list(table.columns) == wanted, given, "columns depth_um,rate_per_cm3_s"):
-        numbers = table.apply(pd.to_numeric, errors="coerce")
-        problems.unless(not numbers.isna().any(axis=None), "entries that are no numbers", "numbers only")
-        table = numbers
-    problems.raise_if_any()
-    return table["depth_um"].tolist(), table["rate_per_cm3_s"].tolist()

@@ -81,7 +81,7 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
         first_step_um=first,
         growth=growth or (2.0 if flat or _has_other_than_boxes(cell) else 2.2),
         largest_um=width / 6,
-        largest_depth_um=cell.thickness_um / 5,
+        largest_depth_um=cell.thickness_um / (10 if flat else 5),
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),
         circle_corners=circle_corners(first, cell),
     )

@@ -100,13 +100,14 @@ def slowest_decay_us(problem):
     [
         (100, 100, 90.901787, 1e-7, 1e-7),
         (1e3, 1e3, 9.9167714, 1e-6, 1e-7),
-        (1e5, 1e5, 1.1683715, 1e-4, 1e-5),
+        (1e5, 1e5, 1.1683715, 1e-5, 1e-6),
         (1e4, 0, 5.9298537, 1e-5, 1e-6),
     ],
 )
 def test_surface_lifetime(dimension, front, rear, expected_us, as_meshed, refined):
     faces = {"front": fc.Surface(srv_cm_per_s=front), "rear": fc.Surface(srv_cm_per_s=rear)}
-    problem = fc.problem(cell_of(constant_base(D), 20, dimension, **faces))
+    growth = None if dimension == 2 else 1.2  # the default of 3-D meshes, 2.2, reaches 5e-5 for S = 1e5
+    problem = fc.problem(cell_of(constant_base(D), 20, dimension, **faces), growth=growth)
     assert slowest_decay_us(problem) == pytest.approx(expected_us, rel=as_meshed)
     if dimension == 2:
         assert slowest_decay_us(problem.refined()) == pytest.approx(expected_us, rel=refined)
