@@ -33,6 +33,7 @@ _WHERE = {
     "Through": "analysis.terminals",
     "current_voltage": "analysis.curve",
     "series_resistance_two_lights_ohm_cm2": "analysis.series_resistance",
+    "contact_current": "analysis.contact_current",
     "collection_probability": "analysis.solve",
     "lateral_losses": "analysis.profiles",
     "Solution": "analysis.solution",
