@@ -14,7 +14,6 @@ import warnings
 from pathlib import Path
 
 import fem_carriers as fc
-from fem_carriers.studies.best import best_point
 
 DOT_UM, FIRST_STEP_UM = 90.0, 4.0
 PITCHES_UM = (180.0, 220.0, 260.0, 300.0, 350.0, 420.0, 500.0)
@@ -45,7 +44,7 @@ def main(pitches_um=PITCHES_UM, first_step_um=FIRST_STEP_UM):
                "collected_front_mA_per_cm2": "collected", "unknowns": "unknowns"}  # fmt: skip
     print("Currents in mA/cm² of cell area")
     print(table[list(columns)].rename(columns=columns).to_string(index=False, float_format="{:.2f}".format))
-    best = best_point(table, "pitch_um", "collected_front_mA_per_cm2")
+    best = fc.best_point(table, "pitch_um", "collected_front_mA_per_cm2")
     print(best)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", fc.ModelWarning)

@@ -171,3 +171,29 @@ def test_depth_profile_from_csv(tmp_path):
 def test_lights_add():
     both = fc.Light.uniform(1e18) + fc.Light.function(lambda x, y, z: np.ones_like(x))
     assert len(both.sources) == 2
+
+
+@pytest.mark.parametrize(
+    ("front", "rear", "phrases"),
+    [
+        ({"layer": EMITTER, "contact": fc.Contact("a")}, {"contact": fc.Contact("a")}, ["layers of both polarities"]),
+        ({"layer": EMITTER, "contact": fc.Contact("a")}, {}, ["no path for majority carriers"]),
+        ({}, {"contact": fc.Contact("a")}, ["no path for minority carriers"]),
+    ],
+)
+def test_impossible_terminals_are_refused_before_meshing(front, rear, phrases, monkeypatch):
+    monkeypatch.setattr("fem_carriers.transport.build.mesh_unit_cell", None)  # any attempt to mesh would fail
+    made = fc.UnitCell(WAFER, 1400, front=fc.Surface(**front), rear=fc.Surface(J0_fA_per_cm2=1, **rear))
+    refused(lambda: fc.current_voltage(made), *phrases)
+    refused(lambda: fc.solve_bipolar(made), *phrases)
+
+
+def test_bare_metal_beside_a_junction_is_refused_before_meshing(monkeypatch):
+    monkeypatch.setattr("fem_carriers.transport.build.mesh_unit_cell", None)
+    strips = [
+        fc.Strip("emitter", 200, layer=EMITTER, contact=fc.Contact("a", 1)),
+        fc.Strip("metal", 100, 150, J0_fA_per_cm2=None, srv_cm_per_s=math.inf, contact=fc.Contact("b", 1)),
+    ]
+    with pytest.warns(fc.ModelWarning):
+        made = cell(*strips)
+    refused(lambda: fc.current_voltage(made), "bare metal (infinite srv) that touches", "a gap")

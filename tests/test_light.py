@@ -25,7 +25,7 @@ def generated(light, *patches, pitch=1000.0, pitch_y=None, rear=None, **fineness
         1e3 * ELEMENTARY_CHARGE_C * system.load.sum() / cell.area_cm2, rel=1e-12
     )
     o = system.optics
-    assert o.incident == pytest.approx(o.shaded + o.reflected + o.escaped + o.generated, rel=1e-12)
+    assert o.incident == pytest.approx(o.shaded + o.reflected + o.escaped + o.lost_in_layers + o.generated, rel=1e-12)
     return system, o.generated
 
 
@@ -63,6 +63,20 @@ def test_reflectance_table_takes_its_share():
     wanted = current(np.trapezoid(share * spectrum.photon_flux_per_cm2_s_nm, spectrum.wavelength_nm))
     assert tabulated.optics.reflected == pytest.approx(wanted, rel=1e-9)
     assert tabulated.optics.incident == pytest.approx(flat.optics.incident, rel=1e-12)
+
+
+@pytest.mark.parametrize("collection", [0.0, 0.4, 1.0])
+def test_an_absorbing_layer_loses_what_it_does_not_collect(collection):
+    """(1 − collection)(1 − exp(−αd)) of the light that enters beside a finger, after reflection."""
+    light = fc.Light.monochromatic(flux_per_cm2_s=FLUX, absorption_per_cm=1e4, reflectance=0.1)
+    layer = fc.DopedLayer("n", 100, absorbing_depth_um=0.3, collection=collection)
+    finger = fc.Strip("f", 100, contact=fc.Contact("front"))
+    cell = fc.UnitCell(WAFER, 1000, front=fc.Face(fc.Surface(layer=layer), [finger]), light=light)
+    o = ExcessSystem(fc.problem(cell)).optics
+    entered = 0.9 * 0.9 * current(FLUX)
+    assert o.lost_in_layers == pytest.approx(entered * (1 - collection) * -np.expm1(-0.3), rel=1e-12)
+    assert o.generated == pytest.approx(entered * -np.expm1(-180.0) - o.lost_in_layers, rel=1e-12)
+    assert o.incident == pytest.approx(o.shaded + o.reflected + o.escaped + o.lost_in_layers + o.generated, rel=1e-12)
 
 
 def test_metal_shades_its_optical_width():

@@ -14,6 +14,7 @@ from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import Complaints
 from ..transport.bipolar import BipolarSystem
 from ..transport.bipolar_newton import BipolarState
+from ..transport.build import checked_problem
 from ..transport.walk import Walker, implied_voltage_V
 from ..units import MA
 from .ledger import make_ledger
@@ -24,6 +25,7 @@ from .terminals import Through, settle
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..cell.unit_cell import UnitCell
     from ..transport.problem import Problem
 
 Condition = float | str | Through
@@ -116,12 +118,13 @@ class BipolarSolution(Solution):
         return dict(zip(names, mean, strict=True))
 
 
-def solve_bipolar(problem: Problem, voltage_V: float | Mapping[str, Condition] = 0.0) -> BipolarSolution:
+def solve_bipolar(problem: Problem | UnitCell, voltage_V: float | Mapping[str, Condition] = 0.0) -> BipolarSolution:
     """Solve the bipolar form: Δn and the majority potential, layers as sheets, contacts and terminals.
 
     Parameters
     ----------
-    problem : Problem
+    problem : Problem or UnitCell
+        A unit cell is checked before it is meshed with default fineness.
     voltage_V : float, or mapping of terminal to float, "floating" or Through
         A number is the voltage of all hole-collecting over all electron-collecting terminals, positive in forward
         bias. In a mapping every terminal is named; "floating" carries no current, ``Through(resistance_ohm_cm2,
@@ -140,7 +143,7 @@ def solve_bipolar(problem: Problem, voltage_V: float | Mapping[str, Condition] =
     BalanceError
         The carrier ledger does not close.
     """
-    walker = Walker(BipolarSystem(problem))
+    walker = Walker(BipolarSystem(checked_problem(problem)))
     if isinstance(voltage_V, Mapping):
         return wrap(settle(walker, voltage_V))
     good = isinstance(voltage_V, int | float) and math.isfinite(voltage_V)

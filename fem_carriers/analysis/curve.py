@@ -12,6 +12,7 @@ import numpy as np
 
 from ..errors import Complaints, SolverError
 from ..transport.bipolar import BipolarSystem
+from ..transport.build import checked_problem
 from ..transport.walk import Walker, implied_voltage_V
 from ..units import MA
 from .bipolar import BipolarSolution, bias_voltages, wrap
@@ -19,6 +20,7 @@ from .bipolar import BipolarSolution, bias_voltages, wrap
 if TYPE_CHECKING:
     import pandas as pd
 
+    from ..cell.unit_cell import UnitCell
     from ..transport.bipolar_newton import BipolarState
     from ..transport.problem import Problem
 
@@ -172,17 +174,11 @@ class Tracer:
         return self.root(implied_voltage_V(self.walker.system), lambda p: (p.current_mA_per_cm2, p.slope_mA_per_cm2_V))
 
     def maximum_power(self, voc: float) -> Point:
-        """d(VJ)/dV = J + V dJ/dV = 0 by the secant method, kept between bounds."""
+        """d(VJ)/dV = J + V dJ/dV = 0 between neighbouring points (R. P. Brent, 1973)."""
+        from scipy.optimize import brentq
+
         low, high = self._bracket(voc)
-        best = low
-        for _ in range(LARGEST_TRIES):
-            share = _rise(low) / (_rise(low) - _rise(high))
-            share = min(max(share, 0.05), 0.95)
-            best = self.at(low.voltage_V + share * (high.voltage_V - low.voltage_V))
-            if abs(_rise(best)) < 1e-6 * abs(best.current_mA_per_cm2) or high.voltage_V - low.voltage_V < 1e-6:
-                return best
-            low, high = (best, high) if _rise(best) > 0 else (low, best)
-        return best
+        return self.at(float(brentq(lambda v: _rise(self.at(v)), low.voltage_V, high.voltage_V, xtol=1e-7)))
 
     def _bracket(self, voc: float) -> tuple[Point, Point]:
         """Neighbouring points between which V J has its maximum."""
@@ -211,7 +207,7 @@ class Tracer:
         raise SolverError("not converged", "A voltage of the curve did not settle.")
 
 
-def current_voltage(problem: Problem, voltages_V: Sequence[float] | None = None) -> CurrentVoltage:
+def current_voltage(problem: Problem | UnitCell, voltages_V: Sequence[float] | None = None) -> CurrentVoltage:
     """Current-voltage curve of a problem with contacts for both carriers.
 
     Starts near the implied voltage, finds open circuit, walks down to short circuit and solves for the maximum of V J.
@@ -219,7 +215,8 @@ def current_voltage(problem: Problem, voltages_V: Sequence[float] | None = None)
 
     Parameters
     ----------
-    problem : Problem
+    problem : Problem or UnitCell
+        A unit cell is checked before it is meshed with default fineness.
     voltages_V : sequence of float, optional
         Voltages of the curve; default are 15 between short and open circuit, dense near the knee.
 
@@ -234,7 +231,7 @@ def current_voltage(problem: Problem, voltages_V: Sequence[float] | None = None)
     SolverError
         As for `solve_bipolar`.
     """
-    tracer = Tracer(problem)
+    tracer = Tracer(checked_problem(problem))
     lit = bool(tracer.walker.system.load.any())
     power = tracer.walker.system.optics.incident_power_mW_per_cm2
     if not lit:

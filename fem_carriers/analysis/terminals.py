@@ -132,8 +132,11 @@ def _check(walker: Walker, conditions: Mapping[str, Any]) -> None:
     for name, condition in conditions.items():
         near = difflib.get_close_matches(str(name), terminals, 1)
         problems.unless(name in terminals, f"terminal {name!r}", f"one of {', '.join(terminals)}", *map(repr, near))
-        good = checks.is_number(condition) or condition == FLOATING or isinstance(condition, Through)
-        problems.unless(good, f"{name} = {condition!r}", '"floating", a voltage, or fc.Through(resistance_ohm_cm2)')
+        number = checks.is_number(condition) and np.isfinite(condition)
+        good = number or condition == FLOATING or isinstance(condition, Through)
+        problems.unless(
+            good, f"{name} = {condition!r}", '"floating", a finite voltage, or fc.Through(resistance_ohm_cm2)'
+        )
     for name in terminals:
         problems.unless(name in conditions, f"no voltage for the terminal {name!r}", 'a voltage or "floating" for each')
     if conditions and all(c == FLOATING for c in conditions.values()):

@@ -67,11 +67,12 @@ def _write_numbers(ax: Axes, numbers: NDArray[np.float64]) -> None:
     """The numbers in their cells, dark on light and light on dark; a frame around the largest."""
     from matplotlib.patches import Rectangle
 
+    decimals = max(0, 3 - int(np.floor(np.log10(np.nanmax(np.abs(numbers)) or 1.0))))  # four digits of the largest
     middle = 0.5 * (np.nanmin(numbers) + np.nanmax(numbers))
     for (row, column), number in np.ndenumerate(numbers):
         if np.isfinite(number):
             color = DARK if number > middle else "white"
-            ax.text(column, row, f"{number:.4g}", ha="center", va="center", color=color, fontsize=9)
+            ax.text(column, row, f"{number:.{decimals}f}", ha="center", va="center", color=color, fontsize=9)
     row, column = np.unravel_index(np.nanargmax(numbers), numbers.shape)
     corner = (float(column) - 0.5, float(row) - 0.5)
     ax.add_patch(Rectangle(corner, 1, 1, fill=False, edgecolor="#D55E00", linewidth=3, clip_on=False))

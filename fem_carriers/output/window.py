@@ -6,6 +6,8 @@ import math
 import os
 import sys
 import warnings
+from collections.abc import Iterator
+from contextlib import contextmanager, nullcontext
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -89,9 +91,17 @@ def view(
         picture = Path(f"{field}.png")
         warnings.warn(f"no display, so the picture is saved as {picture.resolve()}", UserWarning, stacklevel=2)
     path = None if picture is None else target("picture", picture, PICTURES)
+    with nullcontext() if has_display() else _no_display_warnings():
+        return _drawn(scene, field, path, shown, copies=copies, log=log, clip=clip, arrows=arrows, size=size)
+
+
+def _drawn(
+    scene: Scene, field: str, path: Path | None, shown: Any, *, copies: tuple[int, int], size: tuple[int, int],
+    **look: Any,
+) -> Path | None:  # fmt: skip
     plotter = _plotter(path is not None, size)
     try:
-        drawing = Drawing(scene, plotter, field, shown, log=log, clip=clip, arrows=arrows)
+        drawing = Drawing(scene, plotter, field, shown, **look)
         if path is not None:
             drawing.draw()
             return write_atomically(path, lambda p: plotter.screenshot(p, window_size=list(size)))
@@ -120,6 +130,19 @@ def has_display() -> bool:
     if not sys.platform.startswith("linux"):
         return True
     return bool(os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY"))
+
+
+@contextmanager
+def _no_display_warnings() -> Iterator[None]:
+    """Keep VTK from printing that there is no X server before it draws without one."""
+    from vtkmodules.vtkCommonCore import vtkLogger
+
+    before = vtkLogger.GetCurrentVerbosityCutoff()
+    vtkLogger.SetStderrVerbosity(vtkLogger.VERBOSITY_ERROR)
+    try:
+        yield
+    finally:
+        vtkLogger.SetStderrVerbosity(before)
 
 
 def _plotter(off_screen: bool, size: tuple[int, int]) -> Any:

@@ -84,7 +84,7 @@ class BipolarState:
     @property
     def voltages_V(self) -> dict[str, float]:
         """Real terminal voltages."""
-        return {t: self.system.roles.sign * v + 0.0 for t, v in self.voltages.items()}
+        return {t: float(self.system.roles.sign * v + 0.0) for t, v in self.voltages.items()}
 
     @cached_property
     def currents_A(self) -> dict[str, float]:

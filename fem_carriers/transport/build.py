@@ -2,14 +2,11 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
-
+from ..cell.terminal_check import check_terminals
+from ..cell.unit_cell import UnitCell
 from ..errors import Complaints
 from ..meshing.unit_cell_mesh import mesh_unit_cell
 from .problem import Problem
-
-if TYPE_CHECKING:
-    from ..cell.unit_cell import UnitCell
 
 
 def problem(
@@ -45,3 +42,28 @@ def problem(
     return Problem(
         mesh, {"base": cell.base}, surfaces, light=cell.light, cell_area_cm2=cell.area_cm2, order=order, cell=cell
     )
+
+
+def checked_problem(given: Problem | UnitCell) -> Problem:
+    """A problem as it is; a unit cell on its default mesh, after its terminals have been checked.
+
+    Parameters
+    ----------
+    given : Problem or UnitCell
+
+    Returns
+    -------
+    Problem
+
+    Raises
+    ------
+    InputError
+        Neither of the two, or a cell whose terminals cannot carry a finite current; refused before any mesh is made.
+    """
+    if isinstance(given, UnitCell):
+        check_terminals(given)
+        return problem(given)
+    problems = Complaints("problem")
+    problems.unless(isinstance(given, Problem), f"{given!r}", "a Problem or a UnitCell", "fc.problem(cell)")
+    problems.raise_if_any()
+    return given

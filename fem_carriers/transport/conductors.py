@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from ..cell.terminal_check import complain_of_terminals, complain_of_touching
 from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import Complaints
 from ..units import MOHM
@@ -179,27 +180,12 @@ class Conductors:
             impose different potentials.
         """
         problems = Complaints("solve_bipolar")
-        for name in sorted(set(self.minority_terminals) & set(self.majority_terminals)):
-            given = f"the terminal {name!r} on layers of both polarities (or on a layer and on the bare base)"
-            problems.add(given, "one polarity per terminal; this would short the cell", "two terminal names")
-        self._check_paths(problems)
+        complain_of_terminals(problems, self.minority_terminals, self.majority_terminals)
         if (self.layer & self.bare).any():
-            given = "bare metal (infinite srv) that touches a layer of the type opposite to the base"
-            allowed = "no touching surfaces that impose different potentials: the current between them is infinite"
-            problems.add(given, allowed, "a gap, or a finite srv_cm_per_s (1e7 is near the thermal velocity)")
+            complain_of_touching(problems)
         self._check_references(problems)
         self._check_ideal(problems)
         problems.raise_if_any()
-
-    def _check_paths(self, problems: Complaints) -> None:
-        """Both carriers need a way in and out; majority carriers alone may flow between two contacts (a resistor)."""
-        minority, majority = self.minority_terminals, self.majority_terminals
-        if bool(minority) == bool(majority) or len(majority) > 1:
-            return
-        kind = "majority" if minority else "minority"
-        given = f"the terminal {(minority or majority)[0]!r} alone: no path for {kind} carriers to a terminal"
-        allowed = "contacts for both carriers, two or more that reach the base's majority carriers, or none at all"
-        problems.add(given, allowed, f"a contact for the {kind} carriers")
 
     def _check_references(self, problems: Complaints) -> None:
         """All pieces of a contact must store the layer's potential relative to one terminal."""

@@ -47,10 +47,18 @@ class Walker:
         SolverError
             "majority carriers exhausted" or "not converged", naming the voltage that could be reached.
         """
+        if len(set(voltages.values())) <= 1 and not self.system.load.any():
+            return self._equilibrium(voltages)
         if not self.states:
             self.states.append(self._first(voltages))
         nearest = min(self.states, key=lambda s: _distance(s.voltages, voltages))
         return self._walk(nearest, dict(voltages))
+
+    def _equilibrium(self, voltages: Mapping[str, float]) -> BipolarState:
+        """In the dark with all terminals alike Δn and every potential is zero; there is no scale to converge to."""
+        zero = np.zeros(self.system.space.size)
+        self.states.append(newton_bipolar(self.equations, Unknowns(zero, zero, zero), voltages))
+        return self.states[-1]
 
     def _first(self, voltages: Mapping[str, float]) -> BipolarState:
         """A state that is solved from a uniform splitting: near the implied voltage, or at the bias asked for."""

@@ -36,7 +36,8 @@ def test_emitter_lateral_loss(kind):
     expected = J**2 * 1e-3 * sheet * ((pitch - width) * 1e-4) ** 3 / (12 * pitch * 1e-4)
     assert solution.losses.sum_of("sheet") == pytest.approx(expected, rel=1e-3)
     of_sheet = {k: v for k, v in solution.losses.series_resistance_ohm_cm2.items() if k.startswith("layer on front")}
-    assert sum(of_sheet.values()) == pytest.approx(sheet * (pitch * 1e-4) ** 2 / 12 * (1 - width / pitch) ** 3, rel=1e-3)
+    limit = sheet * (pitch * 1e-4) ** 2 / 12  # for w ≪ S
+    assert sum(of_sheet.values()) == pytest.approx(limit * (1 - width / pitch) ** 3, rel=1e-3)
 
 
 # Contact on a sheet, metal at one potential (H. H. Berger, J. Electrochem. Soc. 119, 507 (1972)): √(ρc Rs)/w coth(d/LT)
@@ -46,7 +47,7 @@ RHO, SHEET, LENGTH_UM, GAP_UM = 2.0, 100.0, 50.0, 100.0
 
 
 def sheet_with_contacts(opposite, *, both_sides):
-    """Contact "probe" of 50 µm in the middle of a layer, ideal contacts at one end or both; a nearly insulating base."""
+    """Contact "probe" of 50 µm amid a layer on a nearly insulating base; ideal contacts at one end of it or both."""
     width = 2 * GAP_UM + LENGTH_UM + 40.0
     base = constant_base(
         doping_per_cm3=0.0, ni_per_cm3=1e4, thickness_um=5, material="generic", doping_type="p", lifetime_us=1.0

@@ -60,11 +60,11 @@ def imbalance(solution):
 @pytest.mark.parametrize("rho_mohm_cm2", [0, 0.01, 1])
 def test_electron_and_hole_terminal_currents_agree(kind, doping_per_cm3, rho_mohm_cm2):
     lit = fc.problem(finger_cell(kind, doping_per_cm3, rho_mohm_cm2), growth=3)
-    for solution in solutions(lit, [0.7, 0.55, 0.0]) + solutions(lit.changed(light=None), [0.7, 0.4, 0.1, 0.01]):
+    for solution in solutions(lit, [0.6, 0.0]) + solutions(lit.changed(light=None), [0.6, 0.3, 0.01]):
         assert imbalance(solution) < 1e-10
 
 
-@pytest.mark.parametrize("rho_mohm_cm2", [0, 0.01])
+@pytest.mark.parametrize("rho_mohm_cm2", [pytest.param(0, marks=pytest.mark.slow), 0.01])
 def test_terminal_currents_agree_in_three_dimensions(rho_mohm_cm2):
     lit = fc.problem(finger_cell("p", 1e16, rho_mohm_cm2, pitch_y_um=600), first_step_um=15, growth=4)
     for solution in solutions(lit, [0.6, 0.0]) + solutions(lit.changed(light=None), [0.6, 0.1]):
@@ -81,7 +81,7 @@ def test_loss_budget_closes(kind):
     for spot in (curve.short_circuit, curve.maximum_power, curve.open_circuit):
         losses = spot.solution.losses
         assert losses.delivered_mW_per_cm2 > 1
-        assert abs(losses.misclosure_mW_per_cm2) < 1e-6 * losses.delivered_mW_per_cm2
+        assert abs(losses.misclosure_mW_per_cm2) < 1e-8 * losses.delivered_mW_per_cm2
         assert losses.output_mW_per_cm2 == pytest.approx(spot.power_mW_per_cm2, abs=1e-9)
 
 
@@ -89,8 +89,7 @@ def test_every_loss_converges_with_refinement():
     problem = fc.problem(finger_cell("p"))
     coarse, fine = (solutions(p, [0.6])[0].losses for p in (problem, problem.refined()))
     for key, value in fine.rows.items():
-        assert abs(coarse.rows[key] - value) < 2e-4 * fine.delivered_mW_per_cm2, key
-        assert coarse.rows[key] == pytest.approx(value, rel=0.02, abs=1e-6), key
+        assert coarse.rows[key] == pytest.approx(value, rel=1e-4, abs=1e-12), key
 
 
 # One dimension: J = q Φ QE − J0 (exp(V/VT) − 1) in low injection, QE and J0 of a base with collection probability
@@ -114,10 +113,10 @@ def test_one_dimensional_cell_is_the_textbook_superposition(kind, suns):
     assert curve.jsc_mA_per_cm2 == pytest.approx(photocurrent, rel=1e-4)
     for spot in curve.points:
         dark = J0 * math.expm1(spot.voltage_V / VT)
-        if dark < 0.1 * photocurrent:  # beyond, injection and the resistance of the base show
+        # injection and the resistance of the base show in the dark current; both grow with the light
+        if dark < 0.5 * photocurrent or (suns < 0.01 and spot.voltage_V <= curve.voc_V):
             assert spot.current_mA_per_cm2 == pytest.approx(photocurrent - dark, abs=1e-4 * photocurrent)
-    # a relative 1e-4 of the current at open circuit is 1e-4 VT; injection there is 3e-4 and 3e-5 of the doping
-    assert curve.voc_V == pytest.approx(VT * math.log1p(photocurrent / J0), abs=2e-2 * suns * VT)
+    assert curve.voc_V == pytest.approx(VT * math.log1p(photocurrent / J0), abs=6e-3 * suns * VT)
 
 
 def test_dark_saturation_current():
