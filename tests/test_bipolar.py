@@ -16,7 +16,7 @@ from fem_carriers.analysis.curve import current_voltage
 from fem_carriers.cell.light import Monochromatic
 from fem_carriers.constants import ELEMENTARY_CHARGE_C, thermal_voltage_V
 from fem_carriers.transport.bipolar import BipolarSystem, Unknowns
-from fem_carriers.transport.bipolar_newton import Equations
+from fem_carriers.transport.bipolar_equations import Equations
 from fem_carriers.transport.roles import roles_of
 from fem_carriers.transport.walk import Walker
 

@@ -323,7 +323,7 @@ def test_temperature(example, capsys):
 
 @pytest.mark.slow
 def test_rear_point_contacts(example):
-    """Holes meet the resistance of Cox and Strack's spreading formula, and at most Fischer's addition (see the example).
+    """Holes meet the resistance of Cox and Strack's formula, and at most Fischer's addition (see the example).
 
     That addition lets all current enter at the front. The coarse mesh may miss some of the crowding at the dots' edges.
     """

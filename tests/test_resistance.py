@@ -57,7 +57,7 @@ def test_contact_current_adds_up_to_the_terminal():
     simpson = np.sum(np.diff(x[::2]) * (corners[:-1] + 4 * middle + corners[1:]) / 6) / 500
     assert simpson == pytest.approx(solution.current_mA_per_cm2["front"], rel=1e-9)
     assert abs(density[-1]) > abs(density[0])  # crowded at the edge
-    with pytest.raises(fc.InputError, match="a contact: front.finger, rear"):
+    with pytest.raises(fc.InputError, match=r"a contact: front\.finger, rear"):
         fc.contact_current(solution, "front")
 
 

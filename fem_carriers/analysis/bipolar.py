@@ -13,7 +13,7 @@ import numpy as np
 from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import Complaints
 from ..transport.bipolar import BipolarSystem
-from ..transport.bipolar_newton import BipolarState
+from ..transport.bipolar_state import BipolarState
 from ..transport.build import checked_problem
 from ..transport.walk import Walker, implied_voltage_V
 from ..units import MA

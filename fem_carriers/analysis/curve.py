@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from ..cell.unit_cell import UnitCell
-    from ..transport.bipolar_newton import BipolarState
+    from ..transport.bipolar_state import BipolarState
     from ..transport.problem import Problem
 
 POINTS = 15

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import BalanceError, Complaints
-from ..transport.bipolar_newton import BipolarState
+from ..transport.bipolar_state import BipolarState
 from ..transport.excess import ExcessSystem
 from ..transport.newton import round_off
 from ..units import MA

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
     from numpy.typing import NDArray
 
-    from ..transport.bipolar_newton import BipolarState
+    from ..transport.bipolar_state import BipolarState
 
 
 @dataclass(frozen=True, eq=False)

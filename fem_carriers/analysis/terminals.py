@@ -16,7 +16,7 @@ from ..units import MA
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from ..transport.bipolar_newton import BipolarState
+    from ..transport.bipolar_state import BipolarState
     from ..transport.walk import Walker
 
 FLOATING = "floating"

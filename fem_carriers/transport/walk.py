@@ -10,15 +10,20 @@ import numpy as np
 
 from ..errors import SolverError
 from .bipolar import BipolarSystem, Unknowns
-from .bipolar_newton import BipolarState, Equations, newton_bipolar
+from .bipolar_equations import Equations
+from .bipolar_newton import newton_bipolar
+from .bipolar_state import BipolarState
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 SMALLEST_STEP_V = 2e-4
 LARGEST_PREDICTION_VT = 3.0
-EXHAUSTED = 1e-2
-"""Majority density at a contact, relative to equilibrium, below which a failure is put down to exhaustion."""
+EXHAUSTED, DEPLETED = 1e-2, 0.3
+"""Majority density at a contact, and in the base, over that of equilibrium, below which a failure is put down to
+exhaustion."""
+START_LIFTS_V = (0.0, 0.01, -0.02, 0.03, -0.05, 0.06, -0.1, 0.12, 0.2)
+"""How far above the implied voltage the first solution is tried."""
 
 
 @dataclass
@@ -65,14 +70,17 @@ class Walker:
         implied = self._implied()
         asked = self._bias(voltages)
         error: SolverError | None = None
-        for lift in (0.0, 0.01, -0.02, 0.03, -0.05, 0.06, -0.1):
+        for lift in START_LIFTS_V:
             bias = max(implied + lift, asked, 0.0)
             try:
                 return newton_bipolar(self.equations, self._uniform(bias), self._at_bias(voltages, bias))
             except SolverError as failed:
                 error = failed
-        assert error is not None
-        raise error
+        raise SolverError(
+            "not converged",
+            f"No solution from a uniform splitting near {max(implied, asked):.4g} V, where the calculation starts "
+            f"({error}). Try a voltage nearer to open circuit, less light, or a smaller first step of the mesh.",
+        )
 
     def _implied(self) -> float:
         """The implied voltage; with terminals that take what does not recombine, a splitting at which Δn is M0."""
@@ -118,11 +126,11 @@ class Walker:
 
     def _refusal(self, state: BipolarState, target: Mapping[str, float], failure: str) -> SolverError:
         reached, wanted = self._bias(state.voltages), self._bias(target)
-        contact = exhausted_contact(state)
-        if contact:
+        place = exhausted_place(state)
+        if place:
             return SolverError(
                 "majority carriers exhausted",
-                f"Majority carriers are exhausted at contact {contact} at {reached:.4g} V: the photocurrent cannot be "
+                f"Majority carriers are exhausted at {place} at {reached:.4g} V: the photocurrent cannot be "
                 f"carried at {wanted:.4g} V. Try a higher doping, a wider contact, less light, or a higher voltage.",
             )
         return SolverError(
@@ -161,12 +169,16 @@ def _common_rise(state: BipolarState, voltages: Mapping[str, float]) -> float:
     return rises.pop() if len(rises) == 1 else np.inf
 
 
-def exhausted_contact(state: BipolarState) -> str:
-    """Name of a majority contact where the majority density is nearly gone; empty if there is none."""
+def exhausted_place(state: BipolarState) -> str:
+    """A majority contact, or a point of the base, where the majority carriers are nearly gone; empty if nowhere."""
     roles = state.system.roles
+    left = (roles.M0 + state.dn) / roles.M0
     for metal in state.system.conductors.metals:
-        if not metal.on_layer and float((roles.M0 + state.dn[metal.dofs]).min()) < EXHAUSTED * roles.M0:
-            return metal.surface
+        if not metal.on_layer and float(left[metal.dofs].min()) < EXHAUSTED:
+            return f"contact {metal.surface}"
+    if left.min() < DEPLETED:
+        where = state.system.space.points_cm[:, int(left.argmin())] * 1e4
+        return f"({', '.join(f'{x:.4g}' for x in where)}) µm in the base"
     return ""
 
 
