@@ -65,7 +65,8 @@ def main(pitches_um=PITCHES_UM, diameters_um=DIAMETERS_UM):
     solution = fc.solve_bipolar(fc.problem(dotted(pitch, diameter), **MESH), voltage)
     fc.write_fields(solution, results / "rear_point_contacts.vtu")
     fc.plot_losses(solution.losses, picture=results / "rear_point_contacts_losses.png")
-    fc.view(solution, "hole_quasi_fermi_potential_V", picture=results / "rear_point_contacts_potential.png")
+    picture = results / "rear_point_contacts_potential.png"
+    fc.view(solution, "hole_quasi_fermi_potential_V", picture=picture, clip=False)
     return table, best
 
 

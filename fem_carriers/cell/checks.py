@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
+import numbers
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
@@ -19,8 +20,8 @@ Varying = float | Position
 
 
 def is_number(value: object) -> bool:
-    """True for an int or float that is not NaN (and not a bool)."""
-    return isinstance(value, int | float) and not isinstance(value, bool) and not math.isnan(value)
+    """True for a real number, NumPy's included, that is not NaN (and not a bool)."""
+    return isinstance(value, numbers.Real) and not isinstance(value, bool) and not math.isnan(value)
 
 
 def positive(
