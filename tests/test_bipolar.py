@@ -313,7 +313,7 @@ def test_an_absorbing_layer_takes_its_share_of_the_current(collection):
     solution = solve_bipolar(problem)
     assert solution.ledger.generated_mA_per_cm2 == pytest.approx(expected, rel=1e-12)
     assert solution.cell_current_mA_per_cm2 == pytest.approx(expected, rel=1e-9)  # nothing recombines
-    assert solution.optics.lost_in_layers == pytest.approx(photons * (1 - collection) * -math.expm1(-0.3), rel=1e-12)
+    assert solution.optics.parasitic == pytest.approx(photons * (1 - collection) * -math.expm1(-0.3), rel=1e-12)
 
 
 def test_a_bar_between_two_contacts_of_the_base_is_a_resistor():

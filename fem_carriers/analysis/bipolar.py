@@ -15,7 +15,7 @@ from ..errors import Complaints
 from ..transport.bipolar import BipolarSystem
 from ..transport.bipolar_state import BipolarState
 from ..transport.build import checked_problem
-from ..transport.walk import Walker, implied_voltage_V
+from ..transport.walk import Walker
 from ..units import MA
 from .ledger import make_ledger
 from .losses import Losses, make_losses, node_splitting
@@ -150,6 +150,8 @@ def solve_bipolar(problem: Problem | UnitCell, voltage_V: float | Mapping[str, C
     problems = Complaints("solve_bipolar")
     problems.unless(good, f"voltage_V = {voltage_V!r}", "a finite number, or a mapping of terminals")
     conductors = walker.system.conductors
+    alone = not conductors.metals and voltage_V != 0
+    problems.unless(not alone, f"voltage_V = {voltage_V!r} for a piece without contacts", "0: it floats by itself")
     resistor = bool(conductors.majority_terminals) and not conductors.minority_terminals
     given = f"voltage_V = {voltage_V!r} without a contact on a layer of the type opposite to the base"
     named = ", ".join(f"{t!r}: ..." for t in conductors.majority_terminals)
@@ -168,6 +170,3 @@ def bias_voltages(system: BipolarSystem, voltage_V: float) -> dict[str, float]:
 def wrap(state: BipolarState) -> BipolarSolution:
     """Close the ledger of a state and wrap it up."""
     return BipolarSolution(state=state, ledger=make_ledger(state), warnings=())
-
-
-__all__ = ["BipolarSolution", "Condition", "Through", "bias_voltages", "implied_voltage_V", "solve_bipolar", "wrap"]

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..cell import checks
 from ..errors import Complaints, SolverError
 from ..transport.bipolar import BipolarSystem
 from ..transport.build import checked_problem
@@ -28,7 +29,7 @@ POINTS = 15
 LARGEST_TRIES = 25
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class Point:
     """One point of a curve."""
 
@@ -43,6 +44,9 @@ class Point:
         total = sum(self.state.slopes[t] for t in system.conductors.hole_terminals)
         return system.roles.sign * total / system.problem.cell_area_cm2 / MA
 
+    def __repr__(self) -> str:
+        return f"Point at {self.voltage_V:.6g} V: {self.current_mA_per_cm2:.6g} mA/cm²"
+
     @property
     def power_mW_per_cm2(self) -> float:
         """V J."""
@@ -54,7 +58,7 @@ class Point:
         return wrap(self.state)
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class CurrentVoltage:
     """A current-voltage curve.
 
@@ -144,7 +148,12 @@ class CurrentVoltage:
         return pd.Series(values, name="current_voltage")
 
     def __str__(self) -> str:
+        if self.maximum_power is None:
+            return f"dark curve (no light enters), {len(self.points)} points\n{self.table.to_string(index=False)}"
         return str(self.summary.to_string(float_format="{:.5g}".format))
+
+    def __repr__(self) -> str:
+        return f"CurrentVoltage of {len(self.points)} points\n{self}"
 
     def _repr_html_(self) -> str:
         return str(self.summary.to_frame().to_html(float_format="{:.5g}".format))
@@ -231,15 +240,16 @@ def current_voltage(problem: Problem | UnitCell, voltages_V: Sequence[float] | N
     SolverError
         As for `solve_bipolar`.
     """
+    voltages_V = None if voltages_V is None else _checked(voltages_V)
     tracer = Tracer(checked_problem(problem))
     lit = bool(tracer.walker.system.load.any())
     power = tracer.walker.system.optics.incident_power_mW_per_cm2
     if not lit:
-        chosen = _checked(voltages_V if voltages_V is not None else list(np.linspace(0.7, 0.0, POINTS)))
+        chosen = voltages_V if voltages_V is not None else list(np.linspace(0.7, 0.0, POINTS))
         points = [tracer.at(v) for v in sorted(chosen, reverse=True)]
         return CurrentVoltage(tuple(points[::-1]), None, None, None, power)
     open_circuit = tracer.open_circuit()
-    chosen = _checked(voltages_V) if voltages_V is not None else _default_voltages(open_circuit.voltage_V)
+    chosen = voltages_V if voltages_V is not None else _default_voltages(open_circuit.voltage_V)
     for voltage in sorted(chosen, reverse=True):
         tracer.at(voltage)
     short_circuit = tracer.at(0.0)
@@ -255,16 +265,17 @@ def _rise(point: Point) -> float:
 
 def _default_voltages(voc: float) -> list[float]:
     """Voltages from just above open circuit to 0, dense near the knee."""
-    shares = [1.03, 0.97, 0.94, 0.91, 0.88, 0.85, 0.82, 0.78, 0.7, 0.55, 0.35, 0.0]
+    shares = [1.03, 0.97, 0.94, 0.91, 0.88, 0.85, 0.82, 0.78, 0.7, 0.55, 0.35, 0.15, 0.0]
     return [share * voc for share in shares]
 
 
 def _checked(voltages_V: Sequence[float]) -> list[float]:
     problems = Complaints("current_voltage")
-    values = [float(v) for v in voltages_V]
-    problems.unless(all(math.isfinite(v) for v in values), f"voltages_V = {voltages_V!r}", "finite voltages")
+    listed = isinstance(voltages_V, Sequence | np.ndarray) and not isinstance(voltages_V, str)
+    good = listed and all(checks.is_number(v) and math.isfinite(v) for v in voltages_V)
+    problems.unless(good, f"voltages_V = {voltages_V!r}", "a list of finite voltages")
     problems.raise_if_any()
-    return values
+    return [float(v) for v in voltages_V]
 
 
 def _check_terminals(walker: Walker) -> None:

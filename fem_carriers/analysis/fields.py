@@ -77,8 +77,14 @@ def values_at(problem: Problem, nodal: NDArray[np.float64], points_um: NDArray[n
     low, high = problem.mesh.points_um.min(axis=1), problem.mesh.points_um.max(axis=1)
     outside = ((points < low[:, None] - 1e-6) | (points > high[:, None] + 1e-6)).any(axis=0)
     if outside.any():
-        problems.add(f"the point {tuple(points[:, outside][:, 0])} µm", f"points from {tuple(low)} to {tuple(high)} µm")
+        problems.add(
+            f"the point {_listed(points[:, outside][:, 0])} µm", f"points from {_listed(low)} to {_listed(high)} µm"
+        )
         problems.raise_if_any()
     inward = 1e-9 * (high - low)
     inner = np.clip(points, (low + inward)[:, None], (high - inward)[:, None])
     return np.asarray(problem.space.numbering.probes(inner * 1e-4) @ nodal)
+
+
+def _listed(point: Any) -> str:
+    return "(" + ", ".join(f"{x:.6g}" for x in point) + ")"

@@ -122,9 +122,7 @@ def make_losses(state: BipolarState, current_mA_per_cm2: float) -> Losses:
     rows |= {key: v * 1e3 / problem.cell_area_cm2 for key, v in _conductors(state).items()}
     optics = system.optics
     per_carrier = delivered / optics.generated if optics.generated > 0 else 0.0
-    optical = {
-        name: getattr(optics, name) * per_carrier for name in ("shaded", "reflected", "escaped", "lost_in_layers")
-    }
+    optical = {name: getattr(optics, name) * per_carrier for name in ("shaded", "reflected", "escaped", "parasitic")}
     return Losses(rows, delivered, optical, optics.incident_power_mW_per_cm2, current_mA_per_cm2)
 
 

@@ -13,7 +13,7 @@ from ..transport.adjoint import collection_field
 from ..transport.bulk import make_bulk
 from ..transport.generation import generation_rate
 from ..transport.recombination import surface_law
-from ..transport.steady import ExcessState
+from ..transport.steady import ExcessState, fixed_weights
 from ..units import MA
 
 if TYPE_CHECKING:
@@ -164,7 +164,19 @@ def _surface_losses(solution: Solution, names: list[str]) -> list[tuple[Any, Any
         found.append(
             (distance_um(problem, names, x), law(np.asarray(basis.interpolate(solution.state.dn)))[0] * basis.dx)
         )
-    return found
+    return found + _bare_metal_losses(solution, names)
+
+
+def _bare_metal_losses(solution: Solution, names: list[str]) -> list[tuple[Any, Any]]:
+    """(distances, carriers per second) at the nodes of bare metal, where terminals do the collecting."""
+    state = _excess(solution)
+    weights = fixed_weights(solution.problem, state.constraints)
+    if not any(kind == "terminal" for kind, _ in weights):
+        return []
+    total = sum(weights.values(), np.full(state.dn.size, 1e-300))
+    at_nodes = distance_um(solution.problem, names, solution.problem.space.points_cm)
+    lost = [-(state.residual * w / total) for (kind, _), w in weights.items() if kind == "surface"]
+    return [(at_nodes, amount) for amount in lost]
 
 
 def distance_um(problem: Problem, names: Sequence[str], x_cm: Any) -> Any:

@@ -39,6 +39,8 @@ def series_resistance_two_lights_ohm_cm2(problem: Problem, dimmed: float = 0.9) 
     problems.raise_if_any()
     assert problem.light is not None
     bright = current_voltage(problem)
+    problems.unless(bright.maximum_power is not None, "light that generates nothing", "a problem under light")
+    problems.raise_if_any()
     assert bright.maximum_power is not None
     best = bright.maximum_power
     tracer = Tracer(problem.changed(light=problem.light.scaled(dimmed)))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -58,7 +59,7 @@ class Solution:
 
     @property
     def optics(self) -> Optics:
-        """Where the photons went: incident = shaded + reflected + escaped + generated, mA/cm²."""
+        """Where the photons went, mA/cm²; incident is the sum of the other currents."""
         return self.state.system.optics
 
     @property
@@ -68,8 +69,10 @@ class Solution:
 
     @property
     def collection_efficiency_percent(self) -> float:
-        """Collected at all terminals over generated."""
-        return 100 * sum(self.collected_mA_per_cm2.values()) / self.ledger.generated_mA_per_cm2
+        """Minority carriers collected at all terminals over generated; NaN without generation."""
+        generated = self.ledger.generated_mA_per_cm2
+        collected = sum(v for (kind, _), v in self.ledger.rows.items() if kind == "terminal")
+        return 100 * collected / generated if generated != 0 else math.nan
 
     @property
     def excess_density_per_cm3(self) -> NDArray[np.float64]:

@@ -8,18 +8,17 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import ModelWarning
+from ..errors import Complaints, ModelWarning
 from ..transport.adjoint import collection_field
 from ..transport.drift import Drift, make_drift
 from ..transport.excess import ExcessSystem
+from ..transport.problem import Problem
 from ..transport.steady import ExcessState, solve_state
 from .fields import values_at
 from .solution import Solution, finish
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
-
-    from ..transport.problem import Problem
 
 LARGEST_INJECTION = 0.002
 """Δn over the majority density above which collection at a terminal is a tenth of a percent or more off."""
@@ -67,6 +66,7 @@ def solve_excess(
         Collection at a terminal beyond low injection; a layer conducting sideways to its contact, whose sheet
         resistance this form leaves out; cells too coarse for the drift.
     """
+    _check_problem("solve_excess", problem)
     drift = make_drift(problem, field_V_per_cm, current_mA_per_cm2)
     state = solve_state(ExcessSystem(problem, drift), voltage_V)
     notes = [note for note in (_injection(state), _sheet(state), _coarse(drift)) if note]
@@ -74,6 +74,12 @@ def solve_excess(
     for note in notes:
         warnings.warn(note, ModelWarning, stacklevel=2)
     return solution
+
+
+def _check_problem(what: str, problem: object) -> None:
+    problems = Complaints(what)
+    problems.unless(isinstance(problem, Problem), f"{problem!r}", "a Problem", "fc.problem(cell)")
+    problems.raise_if_any()
 
 
 def _injection(state: ExcessState) -> str:
@@ -158,6 +164,7 @@ def collection_probability(
     ----------
     C. Donolato, Appl. Phys. Lett. 46, 270 (1985).
     """
+    _check_problem("collection_probability", problem)
     system = ExcessSystem(problem)
     state = solve_state(system, voltage_V)
     return CollectionProbability(problem, terminal, collection_field(state, terminal), system.load)

@@ -18,7 +18,7 @@ class Face:
     Parameters
     ----------
     surface : Surface
-        Where no patch lies.
+        Where no patch lies. A contact stated here is transparent; metal that shades is a patch with its own contact.
     patches : sequence of Strip, Dot, Rectangle or Polygon
         A later patch may lie wholly inside an earlier one (metal on a wider layer); partial crossing is refused.
     """
@@ -30,7 +30,8 @@ class Face:
 
     def __post_init__(self) -> None:
         problems = Complaints("Face")
-        object.__setattr__(self, "patches", tuple(self.patches))
+        alone = isinstance(self.patches, Strip | Dot | Rectangle | Polygon)
+        object.__setattr__(self, "patches", (self.patches,) if alone else tuple(self.patches))
         if not isinstance(self.surface, Surface):
             problems.add(f"surface = {self.surface!r}", "a Surface", "fc.Surface(J0_fA_per_cm2=10)")
         for patch in self.patches:

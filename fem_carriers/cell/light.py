@@ -94,7 +94,8 @@ class Monochromatic(Source):
         for name, value in given.items():
             if value is not None:
                 checks.positive(problems, name, value)
-        reflectance_table(problems, self.reflectance)
+        good = checks.is_number(self.reflectance) and 0 <= self.reflectance <= 1
+        problems.unless(good, f"reflectance = {self.reflectance!r}", "a number from 0 to 1 for one wavelength")
         checks.one_of(problems, "path", self.path, PATHS)
         allowed = "a wavelength_nm with path 'lambertian', which needs the refractive index"
         problems.unless(self.path != "lambertian" or self.wavelength_nm is not None, "absorption_per_cm", allowed)
@@ -176,6 +177,8 @@ class Light:
     __repr__ = checks.stated_repr
 
     def __add__(self, other: Light) -> Light:
+        if not isinstance(other, Light):
+            return NotImplemented
         return Light(self.sources + other.sources)
 
     def scaled(self, factor: float) -> Light:

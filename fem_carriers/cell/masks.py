@@ -84,6 +84,24 @@ class Spot:
 Mask = LitRectangle | HalfPlane | Spot
 
 
+def check_masks_on(problems: Complaints, mask: tuple[Mask, ...], box: Any, dimension: int) -> None:
+    """Complain about a mask that the piece cannot hold: a limit in y in 2-D, or no light inside.
+
+    Masks are not repeated from period to period.
+    """
+    from shapely import union_all
+
+    for m in mask:
+        across_y = isinstance(m, HalfPlane) and m.axis == "y"
+        limited = isinstance(m, LitRectangle) and m.y_um != (-FAR_UM, FAR_UM)
+        given = f"mask {m!r} with a limit in y"
+        problems.unless(dimension == 3 or not (across_y or limited), given, "limits in x in a 2-D cell")
+    if mask and union_all([m.outline(dimension) for m in mask]).intersection(box).area == 0:
+        x_low, _, x_high, _ = box.bounds
+        given = f"mask {', '.join(map(repr, mask))} outside of the modelled piece"
+        problems.add(given, f"light on some of x from {x_low:g} to {x_high:g} µm")
+
+
 def check_masks(problems: Complaints, mask: Any) -> tuple[Mask, ...]:
     """The mask as a tuple of shapes; complains about anything else."""
     shapes = () if mask is None else mask if isinstance(mask, tuple | list) else (mask,)

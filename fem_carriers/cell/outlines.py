@@ -29,6 +29,8 @@ class Frame:
         Full repeat lengths; `period_y` is None in 2-D.
     mirrors : tuple of str
         The sides that are mirror planes, of "x_min", "x_max", "y_min", "y_max".
+    edges : tuple of str
+        Axes that end in real edges, beyond which nothing repeats.
     """
 
     x: tuple[float, float]
@@ -36,6 +38,7 @@ class Frame:
     period_x: float
     period_y: float | None
     mirrors: tuple[str, ...]
+    edges: tuple[str, ...] = ()
 
     @property
     def box(self) -> shapely.Polygon:
@@ -126,8 +129,9 @@ def _copies(patch: Patch, frame: Frame, segments: int, opaque: bool) -> list[sha
 
 
 def _neighbours(dx: float, dy: float, frame: Frame) -> list[tuple[float, float]]:
-    rows = [0.0] if frame.period_y is None else [-frame.period_y, 0.0, frame.period_y]
-    return [(dx + i * frame.period_x, dy + row) for i in (-1, 0, 1) for row in rows]
+    rows = [0.0] if frame.period_y is None or "y" in frame.edges else [-frame.period_y, 0.0, frame.period_y]
+    columns = [0.0] if "x" in frame.edges else [-frame.period_x, 0.0, frame.period_x]
+    return [(dx + column, dy + row) for column in columns for row in rows]
 
 
 def _shape(patch: Patch, frame: Frame, segments: int, opaque: bool) -> shapely.Polygon | None:

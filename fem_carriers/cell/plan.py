@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from .outlines import Frame, check_patch, patch_outlines, shade_size
+from .patches import BELOW
 from .surface import Surface
 
 if TYPE_CHECKING:
@@ -71,7 +72,7 @@ def face_layout(side: str, face: Face, frame: Frame, problems: Complaints, segme
         if surface is None:
             continue
         layers.append(Region(f"{side}.{patch.name}", surface, union_all(pieces)))
-        if shade_size(patch, surface.contact is not None):
+        if shade_size(patch, patch.contact is not BELOW and patch.contact is not None):
             opaque += patch_outlines(patch, frame, segments, opaque=True)
     return Layout(_visible(layers), union_all(opaque))
 

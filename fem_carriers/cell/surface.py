@@ -144,3 +144,24 @@ def check_parts(problems: Complaints, layer: object, contact: object) -> None:
         )
     if not (contact is None or isinstance(contact, Contact)):
         problems.add(f"contact = {contact!r}", "a Contact or None", 'fc.Contact("front")')
+
+
+def check_surface(problems: Complaints, name: str, surface: Surface, base_type: str) -> None:
+    """Complain about laws that make no sense on this surface of a base of this type."""
+    if surface.is_junction(base_type) and surface.srv_cm_per_s is not None:
+        problems.add(
+            f"{name}: srv_cm_per_s = {surface.srv_cm_per_s!r} on a layer of the type opposite to the base",
+            "J0_fA_per_cm2 on such a layer",
+            "J0_fA_per_cm2=50",
+        )
+    shunted = surface.shunt_ohm_cm2 is not None and not surface.is_junction(base_type)
+    given = f"{name}: shunt_ohm_cm2 = {surface.shunt_ohm_cm2!r} where there is no junction"
+    problems.unless(not shunted, given, "a shunt across a layer of the type opposite to the base")
+
+
+def check_depth(problems: Complaints, name: str, surface: Surface, thickness_um: float) -> None:
+    """Complain about a layer that would absorb light beyond the base."""
+    if surface.layer is not None:
+        depth = surface.layer.absorbing_depth_um
+        given = f"{name}: absorbing_depth_um = {depth:g}"
+        problems.unless(depth <= thickness_um, given, f"at most the thickness, {thickness_um:g} µm")

@@ -11,9 +11,10 @@ from . import checks
 from .base import Base
 from .face import Face
 from .light import Light
+from .masks import check_masks_on
 from .outlines import UNIT_DEPTH_UM, Frame
 from .plan import Layout, face_layout
-from .surface import Surface
+from .surface import Surface, check_depth, check_surface
 
 SIDES = ("x_min", "x_max", "y_min", "y_max")
 
@@ -81,6 +82,8 @@ class UnitCell:
         return sound
 
     def _check_sides(self, problems: Complaints) -> None:
+        if not problems.unless(isinstance(self.sides, Mapping), f"sides = {self.sides!r}", 'e.g. {"x_max": Surface}'):
+            object.__setattr__(self, "sides", {})
         object.__setattr__(self, "sides", dict(self.sides))
         allowed = SIDES[:2] if self.pitch_y_um is None else SIDES
         for side, surface in self.sides.items():
@@ -95,10 +98,17 @@ class UnitCell:
         for side in ("front", "rear"):
             layout = self._layout(side, problems, 64)
             for region in layout.regions:
-                _check_surface(problems, region.name, region.surface, self.base.doping_type)
+                check_surface(problems, region.name, region.surface, self.base.doping_type)
+                check_depth(problems, region.name, region.surface, self.thickness_um)
             _warn_bare_metal(layout, self.base.doping_type)
         for name, surface in self.sides.items():
-            _check_surface(problems, name, surface, self.base.doping_type)
+            if isinstance(surface, Surface):
+                check_surface(problems, name, surface, self.base.doping_type)
+        self._check_light(problems)
+
+    def _check_light(self, problems: Complaints) -> None:
+        for source in self.light.sources if isinstance(self.light, Light) else ():
+            check_masks_on(problems, source.mask, self.frame.box, self.dimension)
 
     @property
     def dimension(self) -> int:
@@ -114,13 +124,14 @@ class UnitCell:
     def frame(self) -> Frame:
         """The modelled piece in plan."""
         mirrors = () if self.symmetry == "periodic" else tuple(s for s in SIDES if s not in self.sides)
+        edges = tuple(sorted({side[0] for side in self.sides}))
         if self.dimension == 2:
             return Frame(
                 self._span(self.pitch_um), (0.0, UNIT_DEPTH_UM), self.pitch_um, None,
-                tuple(m for m in mirrors if m[0] == "x"),
+                tuple(m for m in mirrors if m[0] == "x"), edges,
             )  # fmt: skip
         y = float(self.pitch_y_um)  # type: ignore[arg-type]
-        return Frame(self._span(self.pitch_um), self._span(y), self.pitch_um, y, mirrors)
+        return Frame(self._span(self.pitch_um), self._span(y), self.pitch_um, y, mirrors, edges)
 
     def _span(self, period: float) -> tuple[float, float]:
         return (0.0, period / 2) if self.symmetry == "half" else (-period / 2, period / 2)
@@ -154,16 +165,6 @@ class UnitCell:
 
     def _layout(self, side: str, problems: Complaints, segments: int) -> Layout:
         return face_layout(side, getattr(self, side), self.frame, problems, segments)
-
-
-def _check_surface(problems: Complaints, name: str, surface: Surface, base_type: str) -> None:
-    """Laws that make no sense on a layer of the opposite type."""
-    if surface.is_junction(base_type) and surface.srv_cm_per_s is not None:
-        problems.add(
-            f"{name}: srv_cm_per_s = {surface.srv_cm_per_s!r} on a layer of the type opposite to the base",
-            "J0_fA_per_cm2 on such a layer",
-            "J0_fA_per_cm2=50",
-        )
 
 
 def _warn_bare_metal(layout: Layout, base_type: str) -> None:

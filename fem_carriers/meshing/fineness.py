@@ -6,6 +6,7 @@ import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+from ..cell import checks
 from ..cell.patches import Dot, Polygon
 from ..errors import Complaints
 from ..units import US
@@ -58,8 +59,7 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     ----------
     cell : UnitCell
     first_step_um, growth : float, optional
-        Replace the defaults: 1/400 (2-D) or 1/40 (3-D) of the smallest feature, and 2, or 2.2 where the mesh can be
-        hexahedra (3-D, strips and rectangles only).
+        Replace the defaults: 1/400 (2-D) or 1/40 (3-D) of the smallest feature; 2.2, or 2 for tets (dots, polygons).
 
     Raises
     ------
@@ -68,10 +68,10 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     """
     problems = Complaints("mesh fineness")
     if first_step_um is not None:
-        good = 0 < first_step_um < math.inf
-        problems.unless(good, f"first_step_um = {first_step_um!r}", "a length above 0", "0.1 to 1 µm")
+        checks.positive(problems, "first_step_um", first_step_um, try_="0.1 to 1 µm")
     if growth is not None:
-        problems.unless(1 < growth <= 4, f"growth = {growth!r}", "above 1, at most 4", "2")
+        good = checks.is_number(growth) and 1 < growth <= 4
+        problems.unless(good, f"growth = {growth!r}", "a number above 1, at most 4", "2")
     problems.raise_if_any()
     flat = cell.dimension == 2
     first = first_step_um or smallest_feature_um(cell) / (400 if flat else 40)
@@ -79,7 +79,7 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     short = diffusion_length_um(cell.base, cell) / 3
     return Fineness(
         first_step_um=first,
-        growth=growth or (2.0 if flat or _has_other_than_boxes(cell) else 2.2),
+        growth=growth or (2.0 if _has_other_than_boxes(cell) else 2.2),
         largest_um=width / 6,
         largest_depth_um=cell.thickness_um / (10 if flat else 5),
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),

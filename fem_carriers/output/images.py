@@ -1,4 +1,4 @@
-"""Where copies of the modelled piece go: mirror images of a symmetry element, translated periods."""
+"""Where copies of the modelled piece go: mirror images of a modelled piece, translated periods."""
 
 from __future__ import annotations
 
@@ -56,7 +56,7 @@ def images(problem: Problem, copies: tuple[int, int]) -> list[Image]:
     problem : Problem
         Of a unit cell, unless copies is (1, 1).
     copies : (int, int)
-        Pieces shown along x and y, counted with the piece itself: (2, 1) shows the symmetry element and its mirror
+        Pieces shown along x and y, counted with the piece itself: (2, 1) shows the modelled piece and its mirror
         image, which is one whole unit cell in x.
 
     Returns

@@ -21,9 +21,9 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 CURRENT, POWER = "_mA_per_cm2", "_mW_per_cm2"
-OPTICAL_IN_POWER = ("shaded", "lost_in_layers")
+OPTICAL_IN_POWER = ("shaded", "parasitic")
 """Reflected and escaped light hardly depends on the contacts and would hide the rest of a stack of powers."""
-OPTICAL = ("shaded", "reflected", "escaped", "lost_in_layers")
+OPTICAL = ("shaded", "reflected", "escaped", "parasitic")
 COORDINATES = ("distance_um", "x_um", "y_um", "z_um")
 PICTURES = (".png", ".pdf", ".svg")
 _LOOK: Any = {

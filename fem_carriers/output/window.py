@@ -60,8 +60,8 @@ def view(
         Draw off screen and save here (.png, .jpg or .tif) instead of opening a window. Without a display a picture
         named after the field is saved in the current folder.
     copies : (int, int)
-        Pieces shown along x and y: mirror images of a symmetry element, translated whole periods. ``(2, 1)`` of a
-        symmetry element shows one whole unit cell in x. Only for unit cells.
+        Pieces shown along x and y: mirror images of a modelled piece, translated whole periods. ``(2, 1)`` of a
+        modelled piece shows one whole unit cell in x. Only for unit cells.
     log : bool, optional
         Logarithmic colours; default for densities and rates that span more than two decades.
     clip : bool

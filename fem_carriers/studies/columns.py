@@ -47,7 +47,8 @@ def collected_current(
 def solution_columns(solution: Solution) -> dict[str, float]:
     """Headline numbers of a solution by column name.
 
-    incident = shaded + reflected + escaped + generated, generated = Σ collected + Σ lost; all in mA/cm² of cell area.
+    incident = shaded + reflected + escaped + parasitic + generated, generated = Σ collected + Σ lost; all in mA/cm² of
+    cell area.
 
     Parameters
     ----------
@@ -60,7 +61,10 @@ def solution_columns(solution: Solution) -> dict[str, float]:
         (``lost_front_finger_mA_per_cm2``); collection efficiency, injection ratio, unknowns, ledger residual.
     """
     ledger, optics = solution.ledger, solution.optics
-    columns = {f"{name}_mA_per_cm2": getattr(optics, name) for name in ("incident", "shaded", "reflected", "escaped")}
+    columns = {
+        f"{name}_mA_per_cm2": getattr(optics, name)
+        for name in ("incident", "shaded", "reflected", "escaped", "parasitic")
+    }
     columns |= {"generated_mA_per_cm2": ledger.generated_mA_per_cm2} | _ledger_columns(ledger)
     collected = sum(v for (kind, _), v in ledger.rows.items() if kind == "terminal")
     generated = ledger.generated_mA_per_cm2

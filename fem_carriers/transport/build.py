@@ -21,7 +21,7 @@ def problem(
         Step of the mesh beside singular edges (edges of junctions, bare metal, contacts); default from the smallest
         feature.
     growth : float, optional
-        Ratio of neighbouring steps away from them; default 2 in 2-D, 2.2 in 3-D.
+        Ratio of neighbouring steps away from them; default 2.2, or 2 for tets.
     order : {1, 2}
         Order of the elements.
 
@@ -35,6 +35,9 @@ def problem(
     """
     problems = Complaints("problem")
     problems.unless(order in (1, 2), f"order = {order!r}", "1 or 2")
+    problems.unless(
+        isinstance(cell, UnitCell), f"cell = {cell!r}", "a UnitCell", "fc.UnitCell(wafer, pitch_um=1300, ...)"
+    )
     problems.raise_if_any()
     mesh = mesh_unit_cell(cell, first_step_um, growth)
     surfaces = {r.name: r.surface for side in ("front", "rear") for r in cell.layout(side).regions}

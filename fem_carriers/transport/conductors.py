@@ -9,7 +9,6 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..cell.terminal_check import complain_of_terminals, complain_of_touching
-from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import Complaints
 from ..units import MOHM
 from .ties import Junction, find_junctions, periodic_map
@@ -226,8 +225,3 @@ def sheet_stiffness(basis: Any) -> Any:
         return dot(along(u, w), along(v, w))
 
     return BilinearForm(integrand).assemble(basis).tocsr()
-
-
-def per_charge(matrix: Any) -> Any:
-    """A conductance as carriers per second and volt."""
-    return matrix / ELEMENTARY_CHARGE_C

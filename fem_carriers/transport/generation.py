@@ -9,6 +9,7 @@ import numpy as np
 
 from ..cell.light import RateFunction, UniformRate
 from ..constants import ELEMENTARY_CHARGE_C
+from ..errors import MeshError
 from ..units import MA, UM
 from .photons import PhotonFlux, photon_flux
 from .spaces import evaluate
@@ -63,7 +64,7 @@ class Optics:
     shaded: float = 0.0
     reflected: float = 0.0
     escaped: float = 0.0
-    lost_in_layers: float = 0.0
+    parasitic: float = 0.0
     generated: float = 0.0
     incident_power_mW_per_cm2: float = 0.0
 
@@ -131,7 +132,7 @@ def _rate_load(space: Space, source: Any, planes: Mapping[str, LitPlane]) -> NDA
     """∫ G v for a source given as a rate."""
     x = space.bulk.x_cm
     rate = source.rate_per_cm3_s if isinstance(source, UniformRate) else source.rate
-    values = evaluate("Light.function", rate, x, zero=True) * np.ones(x.shape[1:])
+    values = evaluate("Light.function", rate, x, zero=True, inf=False) * np.ones(x.shape[1:])
     if source.needs_plane:
         plane = planes[source.enters]
         values = values * inside(lit_region(source, plane), *plane.plane_um(x))
@@ -152,9 +153,15 @@ def _beam_load(problem: Problem, source: Source, plane: LitPlane) -> tuple[NDArr
     load = load - LinearForm(lambda v, w: w.through * v).assemble(skin, through=through)
     entering = float(-(through * skin.dx)[through < 0].sum())
     lit_cm2 = region.area * 1e-8
-    scale = lit_cm2 * float(flux.net(np.zeros(1))[0]) / entering if entering > 0 else 0.0
+    wanted = lit_cm2 * float(flux.net(np.zeros(1))[0])
+    if wanted > 0 and entering <= 0:
+        raise MeshError(
+            "Light falls between the points of the mesh, which is too coarse for its mask. Try a finer mesh, or give "
+            "the light to the unit cell before it is meshed."
+        )
+    scale = wanted / entering if entering > 0 else 0.0
     load, lost = load * scale, _layer_loss(problem, plane, region, flux) * scale
-    budget = _optics(flux, plane, lit_cm2, float(load.sum()), float(lost.sum()), problem.cell_area_cm2, source)
+    budget = _optics(problem, flux, plane, source, (lit_cm2, float(load.sum()), float(lost.sum())))
     return load - lost, budget
 
 
@@ -171,7 +178,8 @@ def _layer_loss(problem: Problem, plane: LitPlane, region: Any, flux: PhotonFlux
         x = np.asarray(basis.global_coordinates())
         if np.abs(plane.depth_cm(x)).max() > 1e-6 * np.ptp(problem.mesh.cells.p):
             continue  # on another face than the light enters
-        ends = flux.net(np.array([0.0, layer.absorbing_depth_um * UM]))
+        deepest = float(plane.depth_cm(problem.mesh.cells.p).max())
+        ends = flux.net(np.array([0.0, min(layer.absorbing_depth_um * UM, deepest)]))
         lost = (1 - layer.collection) * (ends[0] - ends[1]) * inside(region, *plane.plane_um(x))
         total += LinearForm(lambda v, w: w.lost * v).assemble(basis, lost=lost)
     return total
@@ -191,10 +199,17 @@ def _facing_facets(space: Space, plane: LitPlane) -> NDArray[np.int64]:
 
 
 def _optics(
-    flux: PhotonFlux, plane: LitPlane, lit_cm2: float, absorbed: float, lost: float, area_cm2: float, source: Source
+    problem: Problem, flux: PhotonFlux, plane: LitPlane, source: Source, sums: tuple[float, float, float]
 ) -> Optics:
-    """Photon budget of one beam; light outside of a mask never reaches the cell and is not counted as incident."""
-    region_cm2 = _inside_mask(source, plane, plane.total).area * 1e-8
+    """Photon budget of one beam from (lit area, absorbed, lost in layers).
+
+    Light outside of a mask never reaches the cell and is not counted as incident. On an imported mesh without a mask
+    light falls on the whole cell area; what the lit surface does not cover is shaded.
+    """
+    lit_cm2, absorbed, lost = sums
+    area_cm2 = problem.cell_area_cm2
+    whole = problem.cell is None and not source.mask
+    region_cm2 = max(area_cm2, lit_cm2) if whole else _inside_mask(source, plane, plane.total).area * 1e-8
     incident, into = flux.incident * region_cm2, flux.incident * lit_cm2
     reflected = flux.reflected * lit_cm2
     return Optics(
@@ -202,7 +217,7 @@ def _optics(
         shaded=_current(incident - into, area_cm2),
         reflected=_current(reflected, area_cm2),
         escaped=_current(into - reflected - absorbed, area_cm2),
-        lost_in_layers=_current(lost, area_cm2),
+        parasitic=_current(lost, area_cm2),
         generated=_current(absorbed - lost, area_cm2),
         incident_power_mW_per_cm2=flux.power_mW_per_cm2 * region_cm2 / area_cm2,
     )
@@ -226,7 +241,7 @@ def generation_rate(x_cm: Any, light: Light | None, planes: Mapping[str, LitPlan
             lit = inside(lit_region(source, plane), *plane.plane_um(x))
         if isinstance(source, UniformRate | RateFunction):
             rate = source.rate_per_cm3_s if isinstance(source, UniformRate) else source.rate
-            total += evaluate("Light.function", rate, x, zero=True) * lit
+            total += evaluate("Light.function", rate, x, zero=True, inf=False) * lit
             continue
         depth = np.maximum(plane.depth_cm(x), 0.0)
         thickness = float(depth.max())

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..cell.base import Base
 from ..cell.light import Light
-from ..cell.surface import Surface
+from ..cell.surface import Surface, check_surface
 from ..cell.unit_cell import UnitCell
 from ..errors import Complaints
 from ..meshing.mesh import Mesh
@@ -68,6 +68,9 @@ class Problem:
         problems.raise_if_any()
         self._check_names(problems, "volume", self.volumes, self.mesh.volumes, Base, all_needed=True)
         self._check_names(problems, "surface", self.surfaces, self.mesh.surfaces, Surface, all_needed=False)
+        for name, surface in self.surfaces.items():
+            if isinstance(surface, Surface) and self.volumes and isinstance(self.base, Base):
+                check_surface(problems, name, surface, self.base.doping_type)
         self._check_inner_surfaces(problems)
         self._check_one_doping(problems)
         self._check_lit(problems)

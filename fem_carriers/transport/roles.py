@@ -69,7 +69,7 @@ class Roles:
 
 
 def roles_of(eq: Equilibrium) -> Roles:
-    """Roles of an equilibrium; an undoped base counts as p-type."""
+    """Roles of an equilibrium, by the doping type stated (also for an undoped base)."""
     if eq.doping_type == "p":
         return Roles(1, eq.n0, eq.p0, eq.ni, eq.mu_n, eq.mu_p, eq.VT)
     return Roles(-1, eq.p0, eq.n0, eq.ni, eq.mu_p, eq.mu_n, eq.VT)

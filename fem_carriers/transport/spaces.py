@@ -134,7 +134,7 @@ def positions_um(x_cm: Any) -> tuple[Any, Any, Any]:
     return (x[0], np.zeros_like(x[0]), x[1]) if x.shape[0] == 2 else (x[0], x[1], x[2])
 
 
-def evaluate(name: str, value: Varying, x_cm: Any, *, zero: bool = False) -> Any:
+def evaluate(name: str, value: Varying, x_cm: Any, *, zero: bool = False, inf: bool = True) -> Any:
     """A number, or a function of position at quadrature points; refuses values that are not allowed.
 
     Parameters
@@ -145,6 +145,8 @@ def evaluate(name: str, value: Varying, x_cm: Any, *, zero: bool = False) -> Any
     x_cm : (dimension, ...) array
     zero : bool
         Whether 0 is allowed.
+    inf : bool
+        Whether infinity is.
 
     Returns
     -------
@@ -159,10 +161,13 @@ def evaluate(name: str, value: Varying, x_cm: Any, *, zero: bool = False) -> Any
         problems = Complaints(name)
         problems.add(f"a function that failed ({error})", "f(x_um, y_um, z_um) on arrays, one value per point")
         raise InputError(problems.what, problems.items) from error
-    bad = ~((result > 0) | ((result == 0) & zero))
+    bad = ~((result > 0) | ((result == 0) & zero)) | (np.isinf(result) & (not inf))
     if bad.any():
         problems = Complaints(name)
         place = ", ".join(f"{v[bad][0]:.4g}" for v in positions_um(x_cm))
-        problems.add(f"the function gives {result[bad][0]:g} at ({place}) µm", "positive values")
+        problems.add(
+            f"the function gives {result[bad][0]:g} at ({place}) µm",
+            "positive values" if inf else "finite values of at least 0",
+        )
         problems.raise_if_any()
     return result

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -9,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from ..cell import checks
 from ..errors import Complaints, SolverError
 from .coefficients import junction_density
 from .excess import ExcessSystem
@@ -19,6 +21,10 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from .problem import Problem
+
+
+LARGEST_VOLTAGE_V = 10.0
+"""Far above any open-circuit voltage; densities would overflow long before."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,6 +149,7 @@ def constrain(problem: Problem, voltage_V: float | Mapping[str, float]) -> Const
     partner = periodic_map(problem.space, problem.periodic_axes)
     junctions = find_junctions(problem, partner)
     voltages = _voltages(voltage_V, sorted({j.terminal for j in junctions if j.terminal is not None}))
+    _refuse_patchy_layers(problem, junctions)
     values, fixed = np.full(problem.space.size, np.nan), np.zeros(problem.space.size, dtype=bool)
     group = partner.copy()
     for junction in junctions:
@@ -162,14 +169,34 @@ def constrain(problem: Problem, voltage_V: float | Mapping[str, float]) -> Const
     return Constraints(junctions, voltages, fixed, np.where(fixed, values, 0.0), group)
 
 
-def _voltages(voltage_V: float | Mapping[str, float], terminals: list[str]) -> dict[str, float]:
-    if not isinstance(voltage_V, Mapping):
-        return {t: float(voltage_V) for t in terminals}
+def _refuse_patchy_layers(problem: Problem, junctions: list[Junction]) -> None:
+    """A layer that does not conduct sideways is no equipotential where metal does not lie on all of it."""
     problems = Complaints("solve_excess")
-    for name in voltage_V:
-        problems.unless(name in terminals, f"voltage_V of {name!r}", f"collecting terminals: {', '.join(terminals)}")
+    for name in sorted({n for j in junctions for n in j.surfaces}):
+        surface = problem.surfaces[name]
+        insulating = surface.layer is not None and math.isinf(surface.layer.sheet_resistance_ohm_per_sq)
+        given = f"the layer on {name} with an infinite sheet resistance and no contact on it"
+        allowed = "layers that this form can take as equipotentials"
+        problems.unless(surface.contact is not None or not insulating, given, allowed, "solve_bipolar")
     problems.raise_if_any()
-    return {t: float(voltage_V.get(t, 0.0)) for t in terminals}
+
+
+def _voltages(voltage_V: float | Mapping[str, float], terminals: list[str]) -> dict[str, float]:
+    """Voltage of every collecting terminal; refuses what is not a number, unknown terminals, and a bias of nothing."""
+    problems = Complaints("solve_excess")
+    named = dict(voltage_V) if isinstance(voltage_V, Mapping) else dict.fromkeys(terminals, voltage_V)
+    known = ", ".join(terminals) or "none in this problem"
+    for name, value in named.items():
+        problems.unless(name in terminals, f"voltage_V of {name!r}", f"collecting terminals: {known}")
+        good = checks.is_number(value) and abs(value) <= LARGEST_VOLTAGE_V
+        problems.unless(good, f"voltage_V = {value!r}", f"a number up to {LARGEST_VOLTAGE_V:g} V")
+    for name in terminals:
+        problems.unless(name in named, f"no voltage for the terminal {name!r}", "a voltage for each, or one for all")
+    if not terminals and not isinstance(voltage_V, Mapping):
+        given = f"voltage_V = {voltage_V!r} without a contact on a layer of the type opposite to the base"
+        problems.unless(checks.is_number(voltage_V) and voltage_V == 0, given, "0, or such a contact")
+    problems.raise_if_any()
+    return {name: float(value) for name, value in named.items()}
 
 
 def _pin(problem: Problem, name: str, values: NDArray[np.float64]) -> None:

@@ -22,6 +22,8 @@ LARGEST_PREDICTION_VT = 3.0
 EXHAUSTED, DEPLETED = 1e-2, 0.3
 """Majority density at a contact, and in the base, over that of equilibrium, below which a failure is put down to
 exhaustion."""
+HIGHEST_DARK_V, HIGHEST_ABOVE_V = 0.8, 0.5
+"""A bias more than the second above the implied voltage, or above the first in the dark, is refused."""
 START_LIFTS_V = (0.0, 0.01, -0.02, 0.03, -0.05, 0.06, -0.1, 0.12, 0.2)
 """How far above the implied voltage the first solution is tried."""
 
@@ -69,6 +71,12 @@ class Walker:
         """A state that is solved from a uniform splitting: near the implied voltage, or at the bias asked for."""
         implied = self._implied()
         asked = self._bias(voltages)
+        if asked > max(implied, HIGHEST_DARK_V) + HIGHEST_ABOVE_V:
+            raise SolverError(
+                "voltage too high",
+                f"A forward bias of {asked:.4g} V lies far above the {implied:.4g} V that the light and recombination "
+                "imply; the currents would be beyond this model. Try a lower voltage.",
+            )
         error: SolverError | None = None
         for lift in START_LIFTS_V:
             bias = max(implied + lift, asked, 0.0)
@@ -92,8 +100,13 @@ class Walker:
             return float(self.system.roles.splitting(self.system.roles.M0))
 
     def _uniform(self, bias: float) -> Unknowns:
+        """Every junction at the bias; a floating layer has no terminal to be relative to and lies below the base."""
         n = self.system.space.size
-        return Unknowns(np.full(n, self.system.roles.density(bias)[0]), np.zeros(n), np.zeros(n))
+        s = np.zeros(n)
+        for junction in self.system.conductors.junctions:
+            if junction.terminal is None:
+                s[junction.dofs] = -bias
+        return Unknowns(np.full(n, self.system.roles.density(bias)[0]), np.zeros(n), s)
 
     def _bias(self, voltages: Mapping[str, float]) -> float:
         """Largest forward bias of a junction."""
