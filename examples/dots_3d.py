@@ -57,7 +57,7 @@ def main(pitches_um=PITCHES_UM, first_step_um=FIRST_STEP_UM):
     fc.write_table(table, results / "dots_3d.csv")
     fc.plot_sweep(table, "pitch_um", picture=results / "dots_3d.png")
     fc.write_fields(solution, results / "dots_3d.vtu")
-    fc.view(solution, picture=results / "dots_3d_excess_density.png", clip=False)
+    fc.view(solution, picture=results / "dots_3d_excess_density.png")
     return best, table, solution
 
 

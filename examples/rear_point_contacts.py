@@ -66,7 +66,7 @@ def main(pitches_um=PITCHES_UM, diameters_um=DIAMETERS_UM):
     fc.write_fields(solution, results / "rear_point_contacts.vtu")
     fc.plot_losses(solution.losses, picture=results / "rear_point_contacts_losses.png")
     picture = results / "rear_point_contacts_potential.png"
-    fc.view(solution, "hole_quasi_fermi_potential_V", picture=picture, clip=False)
+    fc.view(solution, "hole_quasi_fermi_potential_V", picture=picture)
     return table, best
 
 

@@ -11,13 +11,13 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..constants import ELEMENTARY_CHARGE_C
-from ..errors import Complaints
+from ..errors import BalanceError, Complaints
 from ..transport.bipolar import BipolarSystem
 from ..transport.bipolar_state import BipolarState
 from ..transport.build import checked_problem
 from ..transport.walk import Walker
 from ..units import MA
-from .ledger import make_ledger
+from .ledger import LARGEST_MISCLOSURE, make_ledger
 from .losses import Losses, make_losses, node_splitting
 from .solution import Solution
 from .terminals import Through, settle
@@ -168,5 +168,21 @@ def bias_voltages(system: BipolarSystem, voltage_V: float) -> dict[str, float]:
 
 
 def wrap(state: BipolarState) -> BipolarSolution:
-    """Close the ledger of a state and wrap it up."""
-    return BipolarSolution(state=state, ledger=make_ledger(state), warnings=())
+    """Close the ledger and the balance of the terminals of a state, and wrap it up.
+
+    Raises
+    ------
+    BalanceError
+        One of them does not close to `LARGEST_MISCLOSURE`.
+    """
+    ledger = make_ledger(state)
+    solution = BipolarSolution(state=state, ledger=ledger, warnings=())
+    currents = list(solution.current_mA_per_cm2.values())
+    scale = max([ledger.scale_mA_per_cm2, *map(abs, currents)])
+    if abs(sum(currents)) > LARGEST_MISCLOSURE * scale:
+        raise BalanceError(
+            "balance does not close",
+            f"The terminal currents sum to {sum(currents):.1e} mA/cm² where {scale:.3g} flow; the solution is refused. "
+            "Try a larger first step or less extreme inputs.",
+        )
+    return solution

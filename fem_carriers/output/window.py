@@ -36,7 +36,7 @@ def view(
     picture: str | Path | None = None,
     copies: tuple[int, int] = (1, 1),
     log: bool | None = None,
-    clip: bool = True,
+    clip: bool | None = None,
     arrows: bool = False,
     stretch_z: float = 1.0,
     size: tuple[int, int] = (1280, 800),
@@ -64,8 +64,8 @@ def view(
         modelled piece shows one whole unit cell in x. Only for unit cells.
     log : bool, optional
         Logarithmic colours; default for densities and rates that span more than two decades.
-    clip : bool
-        Cut a 3-D solution open (at half its y at first).
+    clip : bool, optional
+        Cut a 3-D solution open, at half its y at first; default is cut in a window, whole in a picture.
     arrows : bool
         Arrows along the carrier flux; their length grows with its square root.
     stretch_z : float
@@ -91,6 +91,7 @@ def view(
         picture = Path(f"{field}.png")
         warnings.warn(f"no display, so the picture is saved as {picture.resolve()}", UserWarning, stacklevel=2)
     path = None if picture is None else target("picture", picture, PICTURES)
+    clip = path is None if clip is None else clip
     with nullcontext() if has_display() else _no_display_warnings():
         return _drawn(scene, field, path, shown, copies=copies, log=log, clip=clip, arrows=arrows, size=size)
 

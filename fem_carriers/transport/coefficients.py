@@ -35,14 +35,3 @@ def electron_share_excess(dn: Any, base: Equilibrium) -> tuple[Any, Any]:
 def minority_mobility_signed(base: Equilibrium) -> float:
     """μ in the low-injection drift term μ Δn E: +μn in a p-type base, −μp in an n-type base, cm²/(V s)."""
     return base.mu_n if base.doping_type == "p" else -base.mu_p
-
-
-def junction_density(u: Any, base: Equilibrium) -> Any:
-    """Δn where the quasi-Fermi potentials are `u` volts apart.
-
-    np = ni² exp(u/VT) with n − p fixed: Δn = 2c / (b + √(b² + 4c)), b = n0 + p0, c = ni² expm1(u/VT).
-    """
-    import numpy as np
-
-    b, c = base.n0 + base.p0, base.ni**2 * np.expm1(u / base.VT)
-    return 2 * c / (b + np.sqrt(b**2 + 4 * c))

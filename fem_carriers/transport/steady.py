@@ -12,9 +12,9 @@ import numpy as np
 
 from ..cell import checks
 from ..errors import Complaints, SolverError
-from .coefficients import junction_density
 from .excess import ExcessSystem
 from .newton import Outcome, newton, round_off
+from .roles import roles_of
 from .ties import Junction, find_junctions, periodic_map
 
 if TYPE_CHECKING:
@@ -156,7 +156,7 @@ def constrain(problem: Problem, voltage_V: float | Mapping[str, float]) -> Const
         if junction.terminal is None:
             group[np.isin(group, partner[junction.dofs])] = partner[junction.dofs].min()
         else:
-            values[junction.dofs] = junction_density(voltages[junction.terminal], problem.equilibrium)
+            values[junction.dofs] = roles_of(problem.equilibrium).density(voltages[junction.terminal])[0]
     for name in _bare_metal(problem):
         _pin(problem, name, values)
     for junction in junctions:
