@@ -19,7 +19,10 @@ from concurrent.futures import ProcessPoolExecutor
 import numpy as np
 
 import fem_carriers as fc
+from fem_carriers.meshing.fineness import smallest_feature_um
 
+FIRST_STEP = 0.02
+"""First step of the mesh over the smallest feature; the default is 1/400. This is a test of the solver, not of the mesh."""
 TEMPERATURES_K = (275.0, 360.0)
 """Where all silicon models used here hold."""
 
@@ -86,7 +89,8 @@ def outcome(job: tuple[int, bool]) -> tuple[int, str]:
     warnings.simplefilter("ignore", fc.ModelWarning)
     seed, hard = job
     try:
-        problem = fc.problem(random_cell(seed, hard), growth=3.0)
+        cell = random_cell(seed, hard)
+        problem = fc.problem(cell, first_step_um=FIRST_STEP * smallest_feature_um(cell), growth=3.0)
         curve = fc.current_voltage(problem)
         numbers = curve.table.to_numpy()
         if not np.isfinite(numbers).all() or not 0 < curve.fill_factor_percent < 100:
