@@ -22,7 +22,7 @@ import fem_carriers as fc
 from fem_carriers.meshing.fineness import smallest_feature_um
 
 FIRST_STEP = 0.02
-"""First step of the mesh over the smallest feature; the default is 1/400. This is a test of the solver, not of the mesh."""
+"""First step of the mesh over the smallest feature (default 1/400): this tests the solver, not the mesh."""
 TEMPERATURES_K = (275.0, 360.0)
 """Where all silicon models used here hold."""
 
