@@ -92,6 +92,7 @@ class Complaints:
     items: list[Complaint] = field(default_factory=list)
 
     def add(self, given: str, allowed: str, try_: str = "") -> None:
+        """Note one problem: what was given, what is allowed, what to try."""
         self.items.append(Complaint(given, allowed, try_))
 
     def unless(self, condition: bool, given: str, allowed: str, try_: str = "") -> bool:

@@ -155,6 +155,8 @@ def test_only_stated_contacts_shade():
         lambda p: fc.problem(cell(), first_step_um="1"),
         lambda p: fc.problem(cell(), growth="2"),
         lambda p: cell(sides=fc.Surface()),
+        lambda p: fc.Light.sunlight([0.1, 0.2]),
+        lambda p: fc.Light.depth_profile(3.0, 1e20),
         lambda p: fc.Light.monochromatic(flux_per_cm2_s=1, wavelength_nm=800, reflectance=((300, 1200), (0.1, 0.2))),
         lambda p: fc.solve_excess(p.changed(light=fc.Light.function(lambda x, y, z: np.inf + 0 * x))),
     ],

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..errors import Complaints
 from . import checks
-from .light_tables import read_profile, reflectance_table
+from .light_tables import numbers_of, read_profile, reflectance_table
 from .masks import check_masks
 
 if TYPE_CHECKING:
@@ -114,7 +114,13 @@ class DepthProfile(Source):
     def __post_init__(self) -> None:
         problems = Complaints("Light.depth_profile")
         self._check(problems)
-        depth, rate = (tuple(float(v) for v in values) for values in (self.depth_um, self.rate_per_cm3_s))
+        depth, rate = numbers_of(self.depth_um), numbers_of(self.rate_per_cm3_s)
+        if depth is None or rate is None:
+            given = f"depth_um = {self.depth_um!r}, rate_per_cm3_s = {self.rate_per_cm3_s!r}"
+            problems.add(given, "two lists of numbers, or the path of a CSV file")
+            problems.raise_if_any()
+        assert depth is not None
+        assert rate is not None
         object.__setattr__(self, "depth_um", depth)
         object.__setattr__(self, "rate_per_cm3_s", rate)
         given = f"{len(depth)} depths and {len(rate)} rates"

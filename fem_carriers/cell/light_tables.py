@@ -15,16 +15,35 @@ def reflectance_table(problems: Complaints, value: Any) -> Any:
     if not isinstance(value, tuple | list):
         problems.unless(checks.is_number(value) and 0 <= value <= 1, f"reflectance = {value!r}", "0 to 1, or a table")
         return value
-    if not problems.unless(len(value) == 2, "reflectance table", "a pair (wavelength_nm, reflectance)"):
+    columns = [numbers_of(column) for column in value]
+    good = len(columns) == 2 and None not in columns
+    if not problems.unless(good, f"reflectance = {value!r}", "a pair of lists (wavelength_nm, reflectance)"):
         return value
-    wavelength, share = (tuple(float(v) for v in column) for column in value)
+    wavelength, share = columns
+    assert wavelength is not None
+    assert share is not None
     rising = len(wavelength) == len(share) >= 2 and all(b > a for a, b in pairwise(wavelength))
     problems.unless(rising, "reflectance table", "rising wavelengths, as many shares as wavelengths")
     problems.unless(all(0 <= s <= 1 for s in share), "reflectance table", "shares from 0 to 1")
     return wavelength, share
 
 
+def numbers_of(column: Any) -> tuple[float, ...] | None:
+    """A column as numbers; None if it is no list of numbers."""
+    try:
+        return tuple(float(v) for v in column)
+    except (TypeError, ValueError):
+        return None
+
+
 def read_profile(path: Any) -> tuple[Sequence[float], Sequence[float]]:
+    """(depth_um, rate_per_cm3_s) from a CSV file with these two columns.
+
+    Raises
+    ------
+    InputError
+        A file that cannot be read, other columns, or entries that are no numbers.
+    """
     import pandas as pd
 
     problems = Complaints(f"depth profile {path!s}")
