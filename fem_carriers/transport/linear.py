@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
 from copy import copy
 from functools import cache
 from typing import TYPE_CHECKING, Any
@@ -15,6 +17,9 @@ if TYPE_CHECKING:
     from types import TracebackType
 
     from numpy.typing import NDArray
+
+ONE_THREAD_BELOW = 20_000
+"""Unknowns below which a system is solved on one thread."""
 
 
 class Factorization:
@@ -85,6 +90,18 @@ class Factorization:
             self._solver.free()
 
 
+@contextmanager
+def _threads(library: Any, size: int) -> Iterator[None]:
+    """One thread for small systems, which several only slow down."""
+    small = size < ONE_THREAD_BELOW
+    before = library.MKL_Set_Num_Threads_Local(1) if small else 0
+    try:
+        yield
+    finally:
+        if small:
+            library.MKL_Set_Num_Threads_Local(before)
+
+
 @cache
 def _pardiso_library() -> Any:
     """A solver to copy: finding the library on disk takes longer than solving a small problem."""
@@ -97,10 +114,12 @@ class _Pardiso:
     def __init__(self, matrix: Any, *, scale: bool = True) -> None:
         self._matrix, self._solver = matrix, copy(_pardiso_library())
         self._solver.pt, self._solver.iparm = np.zeros_like(self._solver.pt), np.zeros_like(self._solver.iparm)
-        self._solver.factorize(matrix)
+        with _threads(self._solver.libmkl, matrix.shape[0]):
+            self._solver.factorize(matrix)
 
     def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
-        return np.asarray(self._solver.solve(self._matrix, right))
+        with _threads(self._solver.libmkl, self._matrix.shape[0]):
+            return np.asarray(self._solver.solve(self._matrix, right))
 
     def free(self) -> None:
         if self._matrix is not None:
