@@ -7,13 +7,18 @@ else does; then the collected current is Σ load · φ for every generation, to 
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from ..errors import Complaints
 from .balance import mass_matrix
-from .linear import Factorization
+from .channels import Key, rate_slopes
+from .refined import Refined, refined
+from .solver import one_carrier_solver
 from .steady import fixed_weights
 
 if TYPE_CHECKING:
@@ -22,8 +27,80 @@ if TYPE_CHECKING:
     from .steady import ExcessState
 
 
+@dataclass(frozen=True, eq=False)
+class ExcessResponse:
+    """Where a carrier goes that is generated anywhere, in the equations linearised at a state.
+
+    Parameters
+    ----------
+    state : ExcessState
+    frozen : bool
+        False: the differential response, ∂(rate)/∂G at the state. True: lifetime and diffusivity frozen at the state's
+        values; then a field is the share of the carriers generated at a point, in this steady state, that the channel
+        takes, and Σ load · φ is the channel's rate exactly at 0 V.
+    """
+
+    state: ExcessState
+    frozen: bool = False
+
+    @cached_property
+    def weights(self) -> dict[Key, NDArray[np.float64]]:
+        """Share of each terminal and each bare metal surface in the fixed unknowns, (n,)."""
+        weights = fixed_weights(self.state.system.problem, self.state.constraints)
+        total = sum(weights.values(), np.full(self.state.dn.size, 1e-300))
+        return {key: np.where(self.state.constraints.fixed, w / total, 0.0) for key, w in weights.items()}
+
+    @cached_property
+    def slopes(self) -> dict[Key, NDArray[np.float64]]:
+        """Derivative of every recombination rate by Δn at the nodes, (n,)."""
+        return rate_slopes(self.state.system, self.state.dn)
+
+    @property
+    def keys(self) -> list[Key]:
+        """All channels: bulk, surfaces, terminals. Their fields sum to one."""
+        return [*self.slopes, *self.weights]
+
+    @cached_property
+    def matrix(self) -> Any:
+        """The linear operator K of the balance, (n, n)."""
+        return frozen_matrix(self.state) if self.frozen else self.state.system.jacobian(self.state.dn)
+
+    @cached_property
+    def _backward(self) -> Refined:
+        spread = self.state.constraints.spread
+        return refined(one_carrier_solver(self.state.system.space, spread), spread.T @ self.matrix.T @ spread)
+
+    @cached_property
+    def _forward(self) -> Refined:
+        spread = self.state.constraints.spread
+        return refined(one_carrier_solver(self.state.system.space, spread), spread.T @ self.matrix @ spread)
+
+    def field(self, key: Key) -> NDArray[np.float64]:
+        """φ of a channel at the nodes, (n,): its rate per rate of generation there.
+
+        Raises
+        ------
+        KeyError
+            No such channel.
+        """
+        spread = self.state.constraints.spread
+        start = self.weights.get(key)
+        right = self.slopes[key] if start is None else -(self.matrix.T @ start)
+        found = spread @ self._backward.solve(spread.T @ right) if spread.shape[1] else np.zeros(self.state.dn.size)
+        return np.asarray(found if start is None else found + start)
+
+    def moved(self, load: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Change of Δn (n,) by an added load (n,), to first order."""
+        spread = self.state.constraints.spread
+        return np.asarray(spread @ self._forward.solve(spread.T @ load))
+
+
+TOLERANCE = 1e-12
+"""Of the residual, so that reciprocity holds to round-off."""
+
+
 def collection_field(state: ExcessState, terminal: str, *, frozen: bool = False) -> NDArray[np.float64]:
-    """φ at the nodes, shape (n,).
+    """φ of a terminal at the nodes, shape (n,); see `ExcessResponse`.
 
     Parameters
     ----------
@@ -31,32 +108,35 @@ def collection_field(state: ExcessState, terminal: str, *, frozen: bool = False)
     terminal : str
         A collecting terminal, or a surface of bare metal.
     frozen : bool
-        False: the equations linearised at the state; φ = ∂I/∂G there (the differential response). True: lifetime and
-        diffusivity frozen at the state's values; φ is the share of the carriers generated here, in this steady state,
-        that the terminal collects, and Σ load · φ is the collected current exactly at 0 V.
 
     Raises
     ------
     InputError
         No such terminal.
     """
-    constraints = state.constraints
-    weights = fixed_weights(state.system.problem, constraints)
-    names = {name: (kind, name) for kind, name in sorted(weights)}  # a terminal goes before a surface of its name
+    response = ExcessResponse(state, frozen)
+    return response.field(terminal_key(response.weights, terminal))
+
+
+def terminal_key(keys: Iterable[Key], terminal: str) -> Key:
+    """The key of a terminal, or of a surface of bare metal; a terminal goes before a surface of its name.
+
+    Raises
+    ------
+    InputError
+        No such terminal.
+    """
+    names = {name: (kind, name) for kind, name in sorted(keys)}
     problems = Complaints("collection_probability")
     problems.unless(terminal in names, f"terminal {terminal!r}", ", ".join(map(repr, names)) or "none collects here")
     problems.raise_if_any()
-    total = sum(weights.values(), np.full(state.dn.size, 1e-300))
-    start = np.where(constraints.fixed, weights[names[terminal]] / total, 0.0)
-    matrix = frozen_matrix(state) if frozen else state.system.jacobian(state.dn)
-    spread = constraints.spread
-    with Factorization((spread.T @ matrix.T @ spread).tocsr()) as factors:
-        free = factors.solve(-(spread.T @ (matrix.T @ start)))
-    return np.asarray(spread @ free + start)
+    return names[terminal]
 
 
 def frozen_matrix(state: ExcessState) -> Any:
     """The linear operator K with K Δn = F(Δn) + load at the state: D, R/Δn, U/Δn and the drift share frozen."""
+    from scipy.sparse import diags
+
     system, dn = state.system, state.dn
     bulk = system.space.bulk
     values = bulk.values(dn)
@@ -70,6 +150,8 @@ def frozen_matrix(state: ExcessState) -> Any:
         basis = system.space.surfaces[name]
         density = np.asarray(basis.interpolate(dn))
         matrix = matrix + mass_matrix(basis, _ratio(*law(density), density))
+    for weights, law in system.edge_laws.values():
+        matrix = matrix + diags(weights * _ratio(*law(dn), dn))
     return matrix
 
 

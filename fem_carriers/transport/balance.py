@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from .generation import Optics, assemble_generation
+from .perimeter import edge_laws
 from .recombination import Channel, Law, bulk_channels, surface_law
 
 if TYPE_CHECKING:
@@ -44,11 +45,17 @@ class CarrierBalance:
         """Recombination law of every surface that has one."""
         found = {}
         for name, surface in self.problem.surfaces.items():
-            x = np.asarray(self.space.surfaces[name].global_coordinates())
+            varies = callable(surface.J0_fA_per_cm2) or callable(surface.srv_cm_per_s)
+            x = np.asarray(self.space.surfaces[name].global_coordinates()) if varies else None
             law = surface_law(name, surface, self.problem.base, self.problem.equilibrium, x)
             if law is not None:
                 found[name] = law
         return found
+
+    @cached_property
+    def edge_laws(self) -> dict[str, tuple[NDArray[np.float64], Law]]:
+        """Weights and law per length of every outer edge that recombines where it cuts a junction."""
+        return edge_laws(self.problem)
 
     @cached_property
     def _generation(self) -> tuple[NDArray[np.float64], Optics]:
@@ -66,20 +73,29 @@ class CarrierBalance:
 
     def surface_jacobian(self, dn: NDArray[np.float64]) -> Any:
         """d/dΔn of ∮ U v as a sparse matrix (n, n)."""
-        from scipy.sparse import csr_matrix
+        from scipy.sparse import csr_matrix, diags
 
-        total = csr_matrix((self.space.size, self.space.size))
+        shape = (self.space.size, self.space.size)
+        parts = []
         for name, law in self.surface_laws.items():
-            basis = self.space.surfaces[name]
-            total = total + mass_matrix(basis, law(np.asarray(basis.interpolate(dn)))[1])
+            skin = self.space.skins[name]
+            parts.append(skin.mass(law(skin.values(dn))[1]))
+        total = csr_matrix(shape)
+        if parts:
+            entries, rows, columns = (np.concatenate(part) for part in zip(*parts, strict=True))
+            total = csr_matrix((entries, (rows, columns)), shape=shape)
+        for weights, law in self.edge_laws.values():
+            total = total + diags(weights * law(dn)[1])
         return total
 
     def surface_load(self, dn: NDArray[Any]) -> NDArray[Any]:
         """∮ U v, shape (n,); Δn may be complex."""
         total = np.zeros(self.space.size, dtype=dn.dtype)
         for name, law in self.surface_laws.items():
-            basis = self.space.surfaces[name]
-            total = total + load_form(dn.dtype).assemble(basis, rate=law(np.asarray(basis.interpolate(dn)))[0])
+            skin = self.space.skins[name]
+            total = total + skin.load(law(skin.values(dn))[0])
+        for weights, law in self.edge_laws.values():
+            total = total + weights * law(dn)[0]
         return np.asarray(total)
 
     def rate(self, values: Any) -> tuple[Any, Any]:
@@ -97,11 +113,13 @@ class CarrierBalance:
         return {(c.volume, c.name): float((c.law(values[c.cells])[0] * dx[c.cells]).sum()) for c in self.channels}
 
     def surface_rates(self, dn: NDArray[np.float64]) -> dict[str, float]:
-        """∮ U of every surface with a law, 1/s."""
+        """∮ U of every surface and edge with a law, 1/s."""
         found = {}
         for name, law in self.surface_laws.items():
-            basis = self.space.surfaces[name]
-            found[name] = float((law(np.asarray(basis.interpolate(dn)))[0] * basis.dx).sum())
+            skin = self.space.skins[name]
+            found[name] = float((law(skin.values(dn))[0] * skin.dx).sum())
+        for name, (weights, law) in self.edge_laws.items():
+            found[f"{name}: edge"] = float(weights @ law(dn)[0])
         return found
 
 

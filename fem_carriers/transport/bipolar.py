@@ -156,8 +156,8 @@ class BipolarSystem(CarrierBalance):
         bulk, roles = self.space.bulk, self.roles
         d, f_gradient = bulk.values(x.d), bulk.gradients(x.f)
         D, dD = roles.diffusion(d)
-        slope, zero = self.rate(d)[1], np.zeros_like(d)
+        slope = self.rate(d)[1]
         surface = self.surface_jacobian(x.d)
         Kmd = bulk.matrix(D, dD * bulk.gradients(x.d) - roles.mu_m * f_gradient, slope) + surface
-        KMd = bulk.matrix(zero, -roles.mu_M * f_gradient, -slope) - surface
+        KMd = bulk.matrix(None, -roles.mu_M * f_gradient, -slope) - surface
         return Kmd, bulk.matrix(-roles.mu_m * (roles.m0 + d)), KMd, bulk.matrix(-roles.mu_M * (roles.M0 + d))

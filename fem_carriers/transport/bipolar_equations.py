@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import weakref
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -10,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from .bipolar import BipolarSystem, Unknowns
-from .linear import Factorization
+from .solver import LinearSolver, two_carrier_solver
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -21,9 +22,21 @@ class Equations:
     """Which unknowns are free, and the linear algebra of one Newton step.
 
     Unknowns are stacked: first s on layers and Δn elsewhere, then f.
+
+    Parameters
+    ----------
+    system : BipolarSystem
+    keeper : weak reference to LinearSolver, optional
+        Weak, so that a solution that is kept does not keep the factors of its equations.
     """
 
     system: BipolarSystem
+    keeper: weakref.ref[LinearSolver] | None = None
+
+    @property
+    def solver(self) -> LinearSolver:
+        """Solver of the steps; it keeps factors for as long as whoever made it lives."""
+        return (self.keeper and self.keeper()) or two_carrier_solver(self.system.space, lambda: self.spread)
 
     @cached_property
     def ideal(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
@@ -108,21 +121,9 @@ class Equations:
         return A, rise
 
 
-def scaled_solver(equations: Equations, A: Any) -> Callable[[NDArray[np.float64]], NDArray[np.float64]]:
-    """Function that solves the reduced equations, rows and columns scaled to one."""
-    from scipy.sparse import diags
-
-    reduced = (equations.gather @ A @ equations.spread).tocsr()
-    rows = 1 / _largest(reduced, 1)
-    reduced = diags(rows) @ reduced
-    columns = 1 / _largest(reduced, 0)
-    factors = Factorization((reduced @ diags(columns)).tocsr(), scale=False)
-    return lambda right: columns * factors.solve(rows * right, refinements=0)  # Newton steps refine anyway
-
-
-def _largest(matrix: Any, axis: int) -> NDArray[np.float64]:
-    size = np.asarray(abs(matrix).max(axis=axis).toarray()).ravel()
-    return np.where(size > 0, size, 1.0)
+def step_solver(equations: Equations, A: Any) -> Callable[..., NDArray[np.float64]]:
+    """Function (right, tolerance) that solves the reduced equations."""
+    return equations.solver.prepare(equations.gather @ A @ equations.spread).solve
 
 
 def unstack(system: BipolarSystem, stacked: NDArray[np.float64]) -> Unknowns:

@@ -10,7 +10,7 @@ import numpy as np
 from ..constants import ELEMENTARY_CHARGE_C
 from ..errors import SolverError
 from .bipolar import BipolarSystem, Unknowns
-from .bipolar_equations import Equations, scaled_solver, unstack
+from .bipolar_equations import Equations, step_solver, unstack
 from .bipolar_state import BipolarState, terminal_currents
 from .newton import Outcome
 
@@ -26,7 +26,10 @@ LARGEST_MISCLOSURE = 1e-12
 """Of the balances of both carriers, over the throughput, at which the polishing ends."""
 POLISHING_STEPS = 4
 KEEP_BELOW_VT = 0.1
-"""After a step below this many thermal voltages, and a tenth of the one before, the factors are kept."""
+"""After a step below this many thermal voltages, and a tenth of the one before, the Jacobian is kept."""
+STEP_TOLERANCE, TANGENT_TOLERANCE = 1e-6, 1e-3
+"""Of the residuals of linear equations that are solved by iteration: the next step sees to the rest, and a tangent
+only predicts."""
 
 
 def newton_bipolar(equations: Equations, start: Unknowns, voltages: Mapping[str, float]) -> BipolarState:
@@ -57,8 +60,8 @@ def newton_bipolar(equations: Equations, start: Unknowns, voltages: Mapping[str,
             raise SolverError("not a number", "The residual is not finite.")
         if not moved < min(KEEP_BELOW_VT * VT, 0.1 * before):  # else the last factors still serve
             A, rise = equations.matrix(x, slope)
-            solve = scaled_solver(equations, A)
-        change = solve(-(equations.gather @ F))
+            solve = step_solver(equations, A)
+        change = solve(-(equations.gather @ F), STEP_TOLERANCE)
         before, moved = moved, _largest_potential(equations, change)
         scale = min(1.0, LARGEST_CHANGE_VT * VT / moved) if moved > 0 else 1.0
         previous = x
@@ -81,8 +84,8 @@ def _finished(
         if size <= LARGEST_MISCLOSURE or polish == POLISHING_STEPS:
             break
         F = equations.gather @ np.concatenate(residuals)
-        x, _ = system.completed(_advanced(equations, x, solve(-F)), voltages)
-    tangent = unstack(system, equations.spread @ solve(-(equations.gather @ rise)))
+        x, _ = system.completed(_advanced(equations, x, solve(-F, STEP_TOLERANCE)), voltages)
+    tangent = unstack(system, equations.spread @ solve(-(equations.gather @ rise), TANGENT_TOLERANCE))
     return BipolarState(system, dict(voltages), x, Outcome("converged", step, size), equations, tangent)
 
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from ..constants import ELEMENTARY_CHARGE_C
 from .bipolar import BipolarSystem, Unknowns
-from .bipolar_equations import Equations, scaled_solver, unstack
+from .bipolar_equations import Equations, step_solver, unstack
 from .newton import Outcome
 
 if TYPE_CHECKING:
@@ -46,7 +46,7 @@ class BipolarState:
         """dI/dV of every terminal current for a rise of the forward bias, A/V, in the frame of a p-type base."""
         x, slope = self.system.completed(self.x, self.voltages)
         A, rise = self.equations.matrix(x, slope)
-        solve = scaled_solver(self.equations, A)
+        solve = step_solver(self.equations, A)
         tangent = self.equations.spread @ solve(-(self.equations.gather @ rise))
         return _current_slopes(self.system, tangent, A @ tangent + rise)
 
@@ -90,17 +90,19 @@ class BipolarState:
         return left
 
     @cached_property
+    def bare_dofs(self) -> dict[str, NDArray[np.int64]]:
+        """Unknowns of every bare metal surface; a node shared by two of them counts once."""
+        problem, left, found = self.system.problem, self.system.conductors.bare.copy(), {}
+        for name in [n for n, s in problem.surfaces.items() if s.pins_to_zero]:
+            dofs = problem.space.facet_dofs(problem.mesh.surfaces[name])
+            found[name] = dofs[left[dofs]]
+            left[dofs] = False
+        return found
+
+    @cached_property
     def bare_rates(self) -> dict[str, float]:
         """Recombination at every bare metal surface, carriers per second."""
-        conductors, problem = self.system.conductors, self.system.problem
-        names = [n for n, s in problem.surfaces.items() if s.pins_to_zero]
-        left, rates = conductors.bare.copy(), {}
-        for name in names:
-            dofs = problem.space.facet_dofs(problem.mesh.surfaces[name])
-            dofs = dofs[left[dofs]]
-            left[dofs] = False  # a node shared by two bare surfaces counts once
-            rates[name] = float(-self.residuals[0][dofs].sum())
-        return rates
+        return {name: float(-self.residuals[0][dofs].sum()) for name, dofs in self.bare_dofs.items()}
 
 
 def terminal_currents(
@@ -112,12 +114,12 @@ def terminal_currents(
         if metal.resistivity_ohm_cm2 > 0:
             potential = (x.s if metal.on_layer else x.f) - (voltages[metal.terminal] - voltages[metal.reference])
             currents[metal.terminal] += float(metal.load @ potential) / metal.resistivity_ohm_cm2
-    for terminal, rows in _ideal_rows(system).items():
+    for terminal, rows in ideal_rows(system).items():
         currents[terminal] += ELEMENTARY_CHARGE_C * float(np.concatenate(residuals)[rows].sum())
     return currents
 
 
-def _ideal_rows(system: BipolarSystem) -> dict[str, NDArray[np.int64]]:
+def ideal_rows(system: BipolarSystem) -> dict[str, NDArray[np.int64]]:
     """Stacked equations whose sum is the current into each terminal's ideal contacts."""
     n, bare = system.space.size, system.conductors.bare
     rows: dict[str, list[Any]] = {}
@@ -136,6 +138,6 @@ def _current_slopes(system: BipolarSystem, tangent: Any, residual_slope: Any) ->
             slopes[metal.terminal] += (
                 float(metal.load @ (moved.s if metal.on_layer else moved.f)) / metal.resistivity_ohm_cm2
             )
-    for terminal, rows in _ideal_rows(system).items():
+    for terminal, rows in ideal_rows(system).items():
         slopes[terminal] += ELEMENTARY_CHARGE_C * float(residual_slope[rows].sum())
     return slopes

@@ -2,15 +2,23 @@
 
 from __future__ import annotations
 
+import dataclasses
+
+from ..cell import checks
 from ..cell.terminal_check import check_terminals
 from ..cell.unit_cell import UnitCell
 from ..errors import Complaints
 from ..meshing.unit_cell_mesh import mesh_unit_cell
-from .problem import Problem
+from .problem import MeshSteps, Problem
 
 
 def problem(
-    cell: UnitCell, *, first_step_um: float | None = None, growth: float | None = None, order: int = 2
+    cell: UnitCell,
+    *,
+    first_step_um: float | None = None,
+    growth: float | None = None,
+    level: float | None = None,
+    order: int = 2,
 ) -> Problem:
     """Mesh a unit cell and put its description on the mesh.
 
@@ -22,6 +30,10 @@ def problem(
         feature.
     growth : float, optional
         Ratio of neighbouring steps away from them; default 2.2, or 2 for tets.
+    level : float
+        Place in a family of meshes in which everything is refined together: one level more lowers the error of a
+        current about four times and costs about 2.3 (2-D) to 3.5 times (3-D) as many unknowns. Negative is coarser.
+        Default is 0; in 3-D without stated steps -1.
     order : {1, 2}
         Order of the elements.
 
@@ -35,16 +47,40 @@ def problem(
     """
     problems = Complaints("problem")
     problems.unless(order in (1, 2), f"order = {order!r}", "1 or 2")
+    good = level is None or (checks.is_number(level) and -6 <= level <= 6)
+    problems.unless(good, f"level = {level!r}", "a number from -6 to 6", "1, or -1")
     problems.unless(
         isinstance(cell, UnitCell), f"cell = {cell!r}", "a UnitCell", "fc.UnitCell(wafer, pitch_um=1300, ...)"
     )
     problems.raise_if_any()
-    mesh = mesh_unit_cell(cell, first_step_um, growth)
+    if level is None:
+        level = -1.0 if cell.dimension == 3 and first_step_um is None and growth is None else 0.0
+    mesh = mesh_unit_cell(cell, first_step_um, growth, level)
     surfaces = {r.name: r.surface for side in ("front", "rear") for r in cell.layout(side).regions}
-    surfaces |= dict(cell.sides)
+    surfaces |= dict(cell.sides) | {name: plane.surface for name, plane in cell.inner.items()}
+    steps = MeshSteps(first_step_um, growth, level)
     return Problem(
-        mesh, {"base": cell.base}, surfaces, light=cell.light, cell_area_cm2=cell.area_cm2, order=order, cell=cell
+        mesh, {"base": cell.base}, surfaces, cell.light, None, cell.area_cm2, order=order, cell=cell, steps=steps
     )
+
+
+def at_level(given: Problem, level: float) -> Problem:
+    """The same inputs on another mesh of the family; `given.cell` must be known.
+
+    Parameters
+    ----------
+    given : Problem
+    level : float
+
+    Returns
+    -------
+    Problem
+    """
+    assert given.cell is not None
+    assert given.steps is not None
+    steps = dataclasses.replace(given.steps, level=level)
+    mesh = mesh_unit_cell(given.cell, steps.first_step_um, steps.growth, level)
+    return dataclasses.replace(given, mesh=mesh, steps=steps)
 
 
 def checked_problem(given: Problem | UnitCell) -> Problem:

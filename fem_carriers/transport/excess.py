@@ -53,6 +53,11 @@ class ExcessSystem(CarrierBalance):
         """Recombination laws of the surfaces, linear below `lowest`."""
         return {name: continued(law, self.lowest) for name, law in super().surface_laws.items()}
 
+    @cached_property
+    def edge_laws(self) -> dict[str, tuple[NDArray[np.float64], Law]]:
+        """Laws of the edges, linear below `lowest`."""
+        return {n: (weights, continued(law, self.lowest)) for n, (weights, law) in super().edge_laws.items()}
+
     def diffusivity(self, values: Any) -> tuple[Any, Any]:
         """D and dD/dΔn, constant below `lowest`."""
         inside = np.real(values) > self.lowest

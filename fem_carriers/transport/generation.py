@@ -109,10 +109,10 @@ def assemble_generation(problem: Problem) -> tuple[NDArray[np.float64], Optics]:
 
 def lit_region(source: Source, plane: LitPlane) -> Any:
     """Where this source's light falls: the plane, less metal if shaded, inside the mask; plane coordinates in µm."""
-    return _inside_mask(source, plane, plane.clear if source.shaded else plane.total)
+    return inside_mask(source, plane, plane.clear if source.shaded else plane.total)
 
 
-def _inside_mask(source: Source, plane: LitPlane, region: Any) -> Any:
+def inside_mask(source: Source, plane: LitPlane, region: Any) -> Any:
     from shapely import union_all
 
     if not source.mask:
@@ -146,9 +146,9 @@ def _beam_load(problem: Problem, source: Source, plane: LitPlane) -> tuple[NDArr
     space = problem.space
     flux = photon_flux(source, problem.base, float(plane.depth_cm(space.mesh.cells.p).max()))
     region = lit_region(source, plane)
-    skin = space.facets(_facing_facets(space, plane))
-    photons = _photons(np.asarray(skin.global_coordinates()), plane, region, flux)
-    through = np.einsum("dij,dij->ij", photons, np.asarray(skin.normals))  # negative where light enters
+    skin = space.facets(facing_facets(space, plane))
+    depth = np.maximum(plane.depth_cm(np.asarray(skin.global_coordinates())), 0.0)
+    through = flux.net(depth) * crossing(skin, plane, region)  # negative where light enters
     load = space.bulk.load(flux=_photons(space.bulk.x_cm, plane, region, flux))
     load = load - LinearForm(lambda v, w: w.through * v).assemble(skin, through=through)
     entering = float(-(through * skin.dx)[through < 0].sum())
@@ -167,9 +167,18 @@ def _beam_load(problem: Problem, source: Source, plane: LitPlane) -> tuple[NDArr
 
 def _layer_loss(problem: Problem, plane: LitPlane, region: Any, flux: PhotonFlux) -> NDArray[np.float64]:
     """∮ (1 − collection) [Φ(0) − Φ(depth)] v over layers that absorb: carriers generated and lost in the layer."""
+    total = np.zeros(problem.space.size)
+    for depth_cm, lost in absorbing_layers(problem, plane, region):
+        ends = flux.net(np.array([0.0, depth_cm]))
+        total += (ends[0] - ends[1]) * lost
+    return total
+
+
+def absorbing_layers(problem: Problem, plane: LitPlane, region: Any) -> list[tuple[float, NDArray[np.float64]]]:
+    """(Depth in cm, ∮ (1 − collection) v over the lit part) of every layer at the plane that absorbs and loses."""
     from skfem import LinearForm
 
-    total = np.zeros(problem.space.size)
+    found = []
     for name, surface in problem.surfaces.items():
         layer = surface.layer
         if layer is None or layer.absorbing_depth_um == 0 or layer.collection == 1:
@@ -179,10 +188,10 @@ def _layer_loss(problem: Problem, plane: LitPlane, region: Any, flux: PhotonFlux
         if np.abs(plane.depth_cm(x)).max() > 1e-6 * np.ptp(problem.mesh.cells.p):
             continue  # on another face than the light enters
         deepest = float(plane.depth_cm(problem.mesh.cells.p).max())
-        ends = flux.net(np.array([0.0, min(layer.absorbing_depth_um * UM, deepest)]))
-        lost = (1 - layer.collection) * (ends[0] - ends[1]) * inside(region, *plane.plane_um(x))
-        total += LinearForm(lambda v, w: w.lost * v).assemble(basis, lost=lost)
-    return total
+        lost = (1 - layer.collection) * inside(region, *plane.plane_um(x))
+        load = LinearForm(lambda v, w: w.lost * v).assemble(basis, lost=lost)
+        found.append((min(layer.absorbing_depth_um * UM, deepest), np.asarray(load)))
+    return found
 
 
 def _photons(x: Any, plane: LitPlane, region: Any, flux: PhotonFlux) -> Any:
@@ -191,11 +200,27 @@ def _photons(x: Any, plane: LitPlane, region: Any, flux: PhotonFlux) -> Any:
     return size * plane.inward[:, None, None]
 
 
-def _facing_facets(space: Space, plane: LitPlane) -> NDArray[np.int64]:
+def crossing(skin: Any, plane: LitPlane, region: Any) -> Any:
+    """Share of the beam's density that leaves (negative: enters) at the quadrature points of boundary facets.
+
+    What leaves is scaled to what enters, since every ray does both; where a shadow runs through facets of the far side
+    the quadrature alone would not see to that.
+    """
+    x = np.asarray(skin.global_coordinates())
+    through = np.einsum("d,dij->ij", plane.inward, np.asarray(skin.normals)) * inside(region, *plane.plane_um(x))
+    out, into = ((np.maximum(sign * through, 0.0) * skin.dx).sum() for sign in (1, -1))
+    return np.where(through > 0, through * (into / out if out > 0 else 1.0), through)
+
+
+def facing_facets(space: Space, plane: LitPlane) -> NDArray[np.int64]:
     """Boundary facets that the beam crosses."""
-    boundary = space.mesh.cells.boundary_facets()
-    normals = np.asarray(space.facets(boundary).normals)[:, :, 0]
-    return np.asarray(boundary[np.abs(plane.inward @ normals) > 1e-9])
+    cells = space.mesh.cells
+    boundary = cells.boundary_facets()
+    corners = cells.p[:, cells.facets[:, boundary]]
+    sides = corners[:, 1:] - corners[:, :1]
+    flat = len(sides) == 2
+    across = np.array([-sides[1, 0], sides[0, 0]]) if flat else np.cross(sides[:, 0], sides[:, 1], axis=0)
+    return np.asarray(boundary[np.abs(plane.inward @ across) > 1e-9 * np.linalg.norm(across, axis=0)])
 
 
 def _optics(
@@ -209,7 +234,7 @@ def _optics(
     lit_cm2, absorbed, lost = sums
     area_cm2 = problem.cell_area_cm2
     whole = problem.cell is None and not source.mask
-    region_cm2 = max(area_cm2, lit_cm2) if whole else _inside_mask(source, plane, plane.total).area * 1e-8
+    region_cm2 = max(area_cm2, lit_cm2) if whole else inside_mask(source, plane, plane.total).area * 1e-8
     incident, into = flux.incident * region_cm2, flux.incident * lit_cm2
     reflected = flux.reflected * lit_cm2
     return Optics(

@@ -3,23 +3,61 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Iterator
-from contextlib import contextmanager
-from copy import copy
-from functools import cache
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from ..errors import SolverError
+from .memory import check_memory, factor_bytes
+from .pardiso import Pardiso
 
 if TYPE_CHECKING:
     from types import TracebackType
 
     from numpy.typing import NDArray
 
-ONE_THREAD_BELOW = 20_000
-"""Unknowns below which a system is solved on one thread."""
+MANY_ENTRIES = 150
+"""Entries of the factors per unknown above which computing them takes as long as tens of solutions with them: about
+70 in two dimensions, 400 and more in three."""
+
+
+class Scaled:
+    """A square sparse matrix with rows and columns scaled to unit size: A = R⁻¹ S C⁻¹, R and C diagonal.
+
+    Parameters
+    ----------
+    matrix : scipy sparse matrix, shape (n, n)
+    equilibrate : bool
+        False: R = C = |diagonal|^−½, which keeps a symmetric matrix symmetric. True: the largest entry of every row,
+        then of every column, becomes 1.
+
+    Raises
+    ------
+    SolverError
+        "not a number".
+    """
+
+    def __init__(self, matrix: Any, *, equilibrate: bool = False) -> None:
+        import scipy.sparse as sp
+
+        A: Any = sp.csr_matrix(matrix)
+        if not np.all(np.isfinite(A.data)):
+            raise SolverError("not a number", "The equations contain NaN or infinite entries; check functions given.")
+        if equilibrate:
+            self.rows = 1 / _largest(A, 1)
+            A = sp.diags(self.rows) @ A
+            self.columns = 1 / _largest(A, 0)
+            self.matrix = (A @ sp.diags(self.columns)).tocsr()
+        else:
+            size = np.sqrt(np.abs(A.diagonal()))
+            self.rows = self.columns = 1 / np.where(size > 0, size, 1.0)
+            self.matrix = (sp.diags(self.rows) @ A @ sp.diags(self.columns)).tocsr()
+        self.matrix.sort_indices()
+
+    @property
+    def size(self) -> int:
+        """Number of unknowns."""
+        return int(self.matrix.shape[0])
 
 
 class Factorization:
@@ -29,26 +67,29 @@ class Factorization:
 
     Parameters
     ----------
-    matrix : scipy sparse matrix, shape (n, n)
-    scale : bool
-        False if the caller has scaled the matrix.
+    matrix : scipy sparse matrix, shape (n, n), or Scaled
+    positive : bool
+        Factors of the symmetric part of the matrix, which is positive definite.
+    single : bool
+        Factors in single precision where the library offers it.
+
+    Attributes
+    ----------
+    exact : bool
+        Whether `solve` applies: the factors are those of the matrix itself, in double precision.
 
     Raises
     ------
     SolverError
-        "singular" if the matrix has no inverse.
+        "singular" if the matrix has no inverse; "not enough memory" before it runs out.
     """
 
-    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
-        import scipy.sparse as sp
-
-        self._matrix = sp.csr_matrix(matrix)
-        size = np.sqrt(np.abs(self._matrix.diagonal())) if scale else np.ones(self._matrix.shape[0])
-        if not np.all(np.isfinite(self._matrix.data)):
-            raise SolverError("not a number", "The equations contain NaN or infinite entries; check functions given.")
-        self._scale = 1 / np.where(size > 0, size, 1.0)
-        scaled = sp.diags(self._scale) @ self._matrix @ sp.diags(self._scale)
-        self._solver = _pardiso(scaled) or _superlu(scaled)
+    def __init__(self, matrix: Any, *, positive: bool = False, single: bool = False) -> None:
+        self.scaled = matrix if isinstance(matrix, Scaled) else Scaled(matrix)
+        self.positive = positive
+        A = self.scaled.matrix
+        self._solver = _factors((A + A.T) / 2 if positive else A, positive, single)
+        self.exact = not single and (not positive or abs(A - A.T).max() <= 1e-13)
 
     def solve(self, right: NDArray[np.float64], *, refinements: int = 1) -> NDArray[np.float64]:
         """x with A x = b, improved by iterative refinement.
@@ -64,18 +105,29 @@ class Factorization:
         SolverError
             "singular" if the residual stays large.
         """
-        x = self._once(right)
+        A, b = self.scaled.matrix, self.scaled.rows * right
+        x = self._solver.solve(b)
         for _ in range(refinements):
-            x = x + self._once(right - self._matrix @ x)
-        size = abs(self._matrix) @ np.abs(x) + np.abs(right)
-        if not np.all(np.isfinite(x)) or np.abs(right - self._matrix @ x).max() > 1e-8 * size.max():
+            x = x + self._solver.solve(b - A @ x)
+        size = abs(A) @ np.abs(x) + np.abs(b)
+        if not np.all(np.isfinite(x)) or np.abs(b - A @ x).max() > 1e-8 * size.max():
             raise SolverError(
                 "singular", "The linear equations are singular or nearly so; is there a sink for carriers?"
             )
-        return x
+        return np.asarray(self.scaled.columns * x)
 
-    def _once(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
-        return np.asarray(self._scale * self._solver.solve(self._scale * right))
+    def approximate(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
+        """The same once, unchecked: a preconditioner."""
+        return np.asarray(self.scaled.columns * self._solver.solve(self.scaled.rows * right))
+
+    @property
+    def costs_many_solutions(self) -> bool:
+        """Whether computing the factors takes far longer than solving with them."""
+        return bool(self._solver.entries * (2 if self.positive else 1) > MANY_ENTRIES * self.scaled.size)
+
+    def free(self) -> None:
+        """Give the memory back."""
+        self._solver.free()
 
     def __enter__(self) -> Factorization:
         return self
@@ -83,55 +135,22 @@ class Factorization:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        self._solver.free()
+        self.free()
 
     def __del__(self) -> None:
         if hasattr(self, "_solver") and not sys.is_finalizing():
-            self._solver.free()
-
-
-@contextmanager
-def _threads(library: Any, size: int) -> Iterator[None]:
-    """One thread for small systems, which several only slow down."""
-    small = size < ONE_THREAD_BELOW
-    before = library.MKL_Set_Num_Threads_Local(1) if small else 0
-    try:
-        yield
-    finally:
-        if small:
-            library.MKL_Set_Num_Threads_Local(before)
-
-
-@cache
-def _pardiso_library() -> Any:
-    """A solver to copy: finding the library on disk takes longer than solving a small problem."""
-    from pypardiso import PyPardisoSolver
-
-    return PyPardisoSolver(mtype=11)
-
-
-class _Pardiso:
-    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
-        self._matrix, self._solver = matrix, copy(_pardiso_library())
-        self._solver.pt, self._solver.iparm = np.zeros_like(self._solver.pt), np.zeros_like(self._solver.iparm)
-        with _threads(self._solver.libmkl, matrix.shape[0]):
-            self._solver.factorize(matrix)
-
-    def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
-        with _threads(self._solver.libmkl, self._matrix.shape[0]):
-            return np.asarray(self._solver.solve(self._matrix, right))
-
-    def free(self) -> None:
-        if self._matrix is not None:
-            self._solver.free_memory(everything=True)
-            self._matrix = None
+            self.free()
 
 
 class _SuperLU:
-    def __init__(self, matrix: Any, *, scale: bool = True) -> None:
+    def __init__(self, matrix: Any) -> None:
         from scipy.sparse.linalg import splu
 
-        self._lu: Any = splu(matrix.tocsc())
+        try:
+            self._lu: Any = splu(matrix.tocsc())
+        except (RuntimeError, MemoryError) as error:
+            raise SolverError("singular", f"The linear equations could not be factorised ({error}).") from error
+        self.entries = int(self._lu.nnz)
 
     def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
         return np.asarray(self._lu.solve(right))
@@ -140,20 +159,15 @@ class _SuperLU:
         self._lu = None
 
 
-def _pardiso(matrix: Any) -> Any:
-    """Pardiso factors, or None where Pardiso is not installed."""
-    matrix = matrix.tocsr()
-    matrix.sort_indices()
+def _factors(matrix: Any, positive: bool, single: bool) -> Any:
+    """Pardiso's factors, or SuperLU's where Pardiso is not installed."""
     try:
-        return _Pardiso(matrix)
+        return Pardiso(matrix, positive=positive, single=single)
     except (ImportError, OSError):
-        return None
-    except Exception as error:
-        raise SolverError("singular", f"The linear equations could not be factorised ({error}).") from error
-
-
-def _superlu(matrix: Any) -> Any:
-    try:
+        check_memory(factor_bytes(matrix.shape[0], stock=True), f"the factors of {matrix.shape[0]} equations")
         return _SuperLU(matrix)
-    except RuntimeError as error:
-        raise SolverError("singular", f"The linear equations could not be factorised ({error}).") from error
+
+
+def _largest(matrix: Any, axis: int) -> NDArray[np.float64]:
+    size = np.asarray(abs(matrix).max(axis=axis).toarray()).ravel()
+    return np.where(size > 0, size, 1.0)

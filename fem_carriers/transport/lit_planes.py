@@ -45,9 +45,10 @@ def plane_of_facets(mesh: Mesh, name: str) -> LitPlane:
     """
     from skfem import FacetBasis
 
-    from .spaces import lagrange_element
+    from .spaces import cell_mapping, lagrange_element
 
-    basis = FacetBasis(mesh.cells, lagrange_element(mesh.kind, 1), facets=mesh.surfaces[name], intorder=1)
+    element, map_ = lagrange_element(mesh.kind, 1), cell_mapping(mesh)
+    basis = FacetBasis(mesh.cells, element, mapping=map_, facets=mesh.surfaces[name], intorder=1)
     normals = np.asarray(basis.normals)[:, :, 0]
     inward = -normals.mean(axis=1)
     inward /= np.linalg.norm(inward)

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..errors import SolverError
-from .linear import Factorization
+from .solver import LinearSolver
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -17,7 +17,9 @@ if TYPE_CHECKING:
 
 LARGEST_STEPS = 80
 KEEP_BELOW = 0.1
-"""While a step lowers the sum of |F| below this share, the factors of the Jacobian are kept for the next one."""
+"""While a step lowers the sum of |F| below this share, the Jacobian is kept for the next one."""
+LINEAR_TOLERANCE = 1e-8
+"""Of the residual of a step's linear equations, where they are solved by iteration; the next step sees to the rest."""
 
 
 @dataclass(frozen=True)
@@ -50,6 +52,7 @@ def newton(
     noise: Callable[[NDArray[np.float64]], float],
     *,
     tolerance: float = 1e-11,
+    solver: LinearSolver | None = None,
 ) -> tuple[NDArray[np.float64], Outcome]:
     """Solve F(x) = 0 by damped Newton steps.
 
@@ -66,6 +69,7 @@ def newton(
     noise : function
         What rounding can leave in the sum of |F| at x, see `round_off`.
     tolerance : float
+    solver : LinearSolver, optional
 
     Returns
     -------
@@ -78,7 +82,7 @@ def newton(
         "not converged", "not a number" or "singular", with advice.
     """
     x, F = start, residual(start)
-    best, factors = np.inf, None
+    best, equations, solver = np.inf, None, solver or LinearSolver()
     for step in range(LARGEST_STEPS):
         size = np.abs(F).sum() / max(throughput(x), 1e-300)
         if not np.isfinite(size):
@@ -87,16 +91,16 @@ def newton(
             )
         if size <= tolerance and (step > 0 or size == 0):
             return x, Outcome("converged", step, float(size))
-        if factors is None:
-            factors = Factorization(jacobian(x))
-        change = -factors.solve(F)
+        if equations is None:
+            equations = solver.prepare(jacobian(x))
+        change = -equations.solve(F, LINEAR_TOLERANCE)
         settled = np.abs(change).max() <= 1e-12 * np.abs(x).max() and size <= 1e-9
         if size >= 0.5 * best and (settled or np.abs(F).sum() <= noise(x)):
             return x, Outcome("converged", step, float(size))
         best, before = min(best, size), np.abs(F).sum()
         x, F = _damped(residual, x, F, change)
         if np.abs(F).sum() > KEEP_BELOW * before:
-            factors = None  # else they still serve
+            equations = None  # else they still serve
     raise SolverError(
         "not converged",
         f"Newton's method stopped after {LARGEST_STEPS} steps at a residual of {size:.1e} of the carriers. "

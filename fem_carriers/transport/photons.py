@@ -98,8 +98,8 @@ def _sunlight(source: Sunlight, base: Base, thickness_cm: float) -> PhotonFlux:
     keep = (spectrum.wavelength_nm >= source.lowest_nm) & (spectrum.wavelength_nm <= source.highest_nm)
     wavelength = spectrum.wavelength_nm[keep]
     arriving = source.suns * spectrum.photon_flux_per_cm2_s_nm[keep] * _trapezoid_weights(wavelength)
-    absorption, index = _absorption(source.absorption, base, wavelength, source.path)
-    entering = arriving * (1 - _share(source.reflectance, wavelength))
+    absorption, index = absorption_and_index(source.absorption, base, wavelength, source.path)
+    entering = arriving * (1 - share_at(source.reflectance, wavelength))
 
     def exact(depth: Any) -> Any:
         return net_flux(depth[..., None], absorption, index, source.path, thickness_cm) @ entering
@@ -114,7 +114,7 @@ def _monochromatic(source: Monochromatic, base: Base, thickness_cm: float) -> Ph
         absorption, index = np.array([source.absorption_per_cm]), np.ones(1)
     else:
         wavelength = np.array([source.wavelength_nm])
-        absorption, index = _absorption(None, base, wavelength, source.path)
+        absorption, index = absorption_and_index(None, base, wavelength, source.path)
         power = 1e3 * source.flux_per_cm2_s * PLANCK_J_S * LIGHT_SPEED_M_PER_S / float(wavelength[0] * 1e-9)
     entering = source.flux_per_cm2_s * (1 - source.reflectance)
 
@@ -134,7 +134,7 @@ def _profile(source: DepthProfile) -> PhotonFlux:
     return PhotonFlux(lambda d: all_of_it - total(np.clip(d, depth[0], depth[-1])), all_of_it, 0.0)
 
 
-def _absorption(table: Any, base: Base, wavelength: Any, path: str) -> tuple[Any, Any]:
+def absorption_and_index(table: Any, base: Base, wavelength: Any, path: str) -> tuple[Any, Any]:
     """α and refractive index at these wavelengths, from the given table or silicon's."""
     from ..materials import absorption as published
 
@@ -148,7 +148,7 @@ def _absorption(table: Any, base: Base, wavelength: Any, path: str) -> tuple[Any
     return published.absorption_per_cm(wavelength, material), index
 
 
-def _share(reflectance: Any, wavelength: Any) -> Any:
+def share_at(reflectance: Any, wavelength: Any) -> Any:
     """Reflectance at these wavelengths; a table is interpolated linearly and held constant beyond its ends."""
     return np.interp(wavelength, *reflectance) if isinstance(reflectance, tuple) else reflectance
 

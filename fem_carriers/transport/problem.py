@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..cell.base import Base
 from ..cell.light import Light
-from ..cell.surface import Surface, check_surface
+from ..cell.surface import Surface, check_inner_surface, check_surface
 from ..cell.unit_cell import UnitCell
 from ..errors import Complaints
 from ..meshing.mesh import Mesh
@@ -21,6 +21,15 @@ from .spaces import Space
 
 if TYPE_CHECKING:
     from ..cell.base import Equilibrium
+
+
+@dataclass(frozen=True)
+class MeshSteps:
+    """How the mesh of a unit cell was asked for; see `fem_carriers.problem`."""
+
+    first_step_um: float | None = None
+    growth: float | None = None
+    level: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -33,7 +42,8 @@ class Problem:
     volumes : mapping of str to Base
         One for every named volume. Doping, mobilities and ni must agree; lifetimes may differ.
     surfaces : mapping of str to Surface
-        A named surface left out is insulated (a mirror plane).
+        A named surface left out is insulated (a mirror plane); inside the volume it is without effect. Surfaces inside
+        the volume (grain boundaries, cracks) recombine, U = S Δn counting the carriers from both sides.
     light : Light, optional
     lit_surface : str, or mapping of {"front", "rear"} to str
         The flat surface(s) that light enters.
@@ -43,6 +53,8 @@ class Problem:
         Order of the Lagrange elements.
     cell : UnitCell, optional
         The unit cell the mesh was built from; gives shading outlines and periodic sides.
+    steps : MeshSteps, optional
+        How that mesh was asked for.
 
     Raises
     ------
@@ -58,6 +70,7 @@ class Problem:
     cell_area_cm2: float = 0.0
     order: int = 2
     cell: UnitCell | None = field(default=None, repr=False)
+    steps: MeshSteps | None = field(default=None, repr=False)
 
     def __post_init__(self) -> None:
         problems = Complaints("Problem")
@@ -89,9 +102,15 @@ class Problem:
             problems.unless(name in given, f"no Base for the volume {name!r}", "one Base for every volume")
 
     def _check_inner_surfaces(self, problems: Complaints) -> None:
-        for name in self.surfaces:
-            if name in self.mesh.surfaces and name not in self.space.surfaces:
-                problems.add(f"surface {name!r} lies inside the volume or is empty", "surfaces on the outside")
+        for name, surface in self.surfaces.items():
+            if name not in self.mesh.surfaces or not isinstance(surface, Surface):
+                continue
+            empty, inside = self.mesh.surfaces[name].size == 0, self.mesh.inner_share(name)
+            problems.unless(not empty, f"surface {name!r} without facets", "a surface with at least one facet")
+            given = f"surface {name!r}, of which {100 * inside:.0f} % lies inside the volume"
+            problems.unless(inside in (0, 1), given, "all of it inside or on the outside", "two names")
+            if inside == 1:
+                check_inner_surface(problems, name, surface)
 
     def _check_one_doping(self, problems: Complaints) -> None:
         bases = [b for b in self.volumes.values() if isinstance(b, Base)]
@@ -104,9 +123,8 @@ class Problem:
 
     def _check_lit(self, problems: Complaints) -> None:
         for name in self._lit_names.values():
-            problems.unless(
-                name in self.mesh.surfaces, f"lit_surface {name!r}", f"one of {', '.join(self.mesh.surfaces)}"
-            )
+            outside = [n for n in self.mesh.surfaces if self.mesh.inner_share(n) == 0]
+            problems.unless(name in outside, f"lit_surface {name!r}", f"one of {', '.join(outside)}")
         for source in self.light.sources if self.light is not None else ():
             if self.cell is None and source.needs_plane and source.enters not in self._lit_names:
                 problems.add(
@@ -119,6 +137,10 @@ class Problem:
         if self.lit_surface is None:
             return {}
         return {"front": self.lit_surface} if isinstance(self.lit_surface, str) else self.lit_surface
+
+    def lit_name(self, enters: str) -> str:
+        """The named surface of an imported mesh that light enters; empty if there is none."""
+        return self._lit_names.get(enters, "")
 
     @cached_property
     def space(self) -> Space:
@@ -153,11 +175,14 @@ class Problem:
 
     def changed(self, **changes: Any) -> Problem:
         """A copy with other inputs on the same mesh, e.g. ``problem.changed(light=...)``."""
-        return dataclasses.replace(self, **changes)
+        copy = dataclasses.replace(self, **changes)
+        if not {"mesh", "order"} & changes.keys():
+            copy.__dict__["space"] = self.space  # a cached property; shared, since it depends on mesh and order only
+        return copy
 
     def refined(self) -> Problem:
         """The same on the uniformly refined mesh."""
-        return dataclasses.replace(self, mesh=self.mesh.refined())
+        return dataclasses.replace(self, mesh=self.mesh.refined(), steps=None)
 
     def __repr__(self) -> str:
         return f"Problem on {self.mesh!r}; {self.space.size} unknowns of order {self.order}"

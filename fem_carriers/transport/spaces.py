@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
@@ -10,6 +11,7 @@ import numpy as np
 
 from ..errors import Complaints, InputError, MeshError
 from .bulk import Bulk, make_bulk
+from .skin import Skin
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -43,6 +45,30 @@ def cell_mapping(mesh: Mesh) -> Any:
         return mesh.cells.mapping()
 
     class StretchedMapping(MappingIsoparametric):  # type: ignore[misc]
+        """Jacobians are computed once per set of points, not once per shape function."""
+
+        _known: tuple[Any, ...] = (None, None)
+
+        def F(self, X: Any, tind: Any = None) -> Any:
+            corners, n = _corners(self.mesh, tind), self.mesh.t.shape[0]
+            return sum(corners[:, k, :, None] * self.elem.lbasis(X, k)[0] for k in range(n))
+
+        def J(self, i: int, j: int, X: Any, tind: Any = None) -> Any:
+            return self._jacobian(X, tind)[0][i, j]
+
+        def invDF(self, X: Any, tind: Any = None) -> Any:
+            return self._jacobian(X, tind)[1]
+
+        def _jacobian(self, X: Any, tind: Any) -> tuple[Any, Any]:
+            if self._known[0] is not X or self._known[1] is not tind:
+                corners, n = _corners(self.mesh, tind), self.mesh.t.shape[0]
+                slopes = [np.asarray(self.elem.lbasis(X, k)[1]) for k in range(n)]
+                slopes = [s if X.ndim == 3 else s[:, None] for s in slopes]
+                J: Any = sum(corners[:, None, k, :, None] * slopes[k] for k in range(n))
+                inverse = np.linalg.inv(J.transpose(2, 3, 0, 1)).transpose(2, 3, 0, 1)
+                self._known = (X, tind, J, np.ascontiguousarray(inverse))
+            return self._known[2:]
+
         def invF(self, x: Any, tind: Any = None, newton_max_iters: int = 50, newton_tol: float = 1e-12) -> Any:
             X = np.full(x.shape, 0.5)
             for _ in range(newton_max_iters):
@@ -55,6 +81,37 @@ def cell_mapping(mesh: Mesh) -> Any:
             return X
 
     return StretchedMapping(mesh.cells, mesh.cells.elem(), mesh.cells.bndelem)
+
+
+def _corners(mesh: Any, cells: Any) -> Any:
+    """Corners of all or of some cells, (dimension, n_corners, n_cells)."""
+    return mesh.p[:, mesh.t if cells is None else mesh.t[:, cells]]
+
+
+class OnDemand(Mapping[str, Any]):
+    """A mapping whose values are computed when first asked for.
+
+    Parameters
+    ----------
+    names : sequence of str
+    compute : function
+    """
+
+    def __init__(self, names: Sequence[str], compute: Callable[[str], Any]) -> None:
+        self._names, self._compute, self._known = list(names), compute, dict[str, Any]()
+
+    def __getitem__(self, name: str) -> Any:
+        if name not in self._known:
+            if name not in self._names:
+                raise KeyError(name)
+            self._known[name] = self._compute(name)
+        return self._known[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._names)
+
+    def __len__(self) -> int:
+        return len(self._names)
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,7 +155,7 @@ class Space:
         return self.numbering.doflocs
 
     def facets(self, facets: NDArray[np.int64], quadrature_order: int | None = None) -> Any:
-        """scikit-fem basis over boundary facets."""
+        """scikit-fem basis over facets; those inside are seen from one of their cells, once."""
         from skfem import FacetBasis
 
         order = quadrature_order or self.quadrature_order
@@ -112,11 +169,15 @@ class Space:
         )
 
     @cached_property
-    def surfaces(self) -> dict[str, Any]:
-        """scikit-fem facet basis of every named surface on the boundary."""
-        boundary = np.zeros(self.mesh.cells.facets.shape[1], dtype=bool)
-        boundary[self.mesh.cells.boundary_facets()] = True
-        return {name: self.facets(f) for name, f in self.mesh.surfaces.items() if f.size and boundary[f].all()}
+    def surfaces(self) -> Mapping[str, Any]:
+        """scikit-fem facet basis of every named surface, made when first used."""
+        names = [name for name, facets in self.mesh.surfaces.items() if facets.size]
+        return OnDemand(names, lambda name: self.facets(self.mesh.surfaces[name]))
+
+    @cached_property
+    def skins(self) -> Mapping[str, Skin]:
+        """Integrals over every named surface."""
+        return OnDemand(list(self.surfaces), lambda name: Skin.of(self.surfaces[name]))
 
     @property
     def size(self) -> int:

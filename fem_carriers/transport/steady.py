@@ -15,6 +15,7 @@ from ..errors import Complaints, SolverError
 from .excess import ExcessSystem
 from .newton import Outcome, newton, round_off
 from .roles import roles_of
+from .solver import LinearSolver, check_forecast, one_carrier_solver
 from .ties import Junction, find_junctions, periodic_map
 
 if TYPE_CHECKING:
@@ -232,13 +233,17 @@ def _fix_partners(fixed: Any, values: Any, partner: Any) -> None:
     fixed |= follow
 
 
-def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0.0) -> ExcessState:
+def solve_state(
+    system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0.0, *, solver: LinearSolver | None = None
+) -> ExcessState:
     """Solve F(Δn) = 0.
 
     Parameters
     ----------
     system : ExcessSystem
     voltage_V : float or mapping of terminal to float
+    solver : LinearSolver, optional
+        One that solved a neighbouring problem on the same mesh: its factors serve here as preconditioner.
 
     Returns
     -------
@@ -248,6 +253,7 @@ def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0
     ------
     InputError, SolverError
     """
+    check_forecast(system.space, 1)
     constraints = constrain(system.problem, voltage_V)
     spread, level = constraints.spread, _level(system, constraints)
     fixed = np.where(constraints.fixed, constraints.values - level, 0.0)
@@ -259,6 +265,7 @@ def solve_state(system: ExcessSystem, voltage_V: float | Mapping[str, float] = 0
             free,
             lambda y: _throughput(system, constraints, spread @ y + fixed, level),
             lambda y: round_off(spread.T @ system.jacobian(spread @ y + fixed + level), spread @ y + fixed),
+            solver=solver or one_carrier_solver(system.space, spread),
         )
     above = spread @ free + fixed
     return ExcessState(system, constraints, above + level, system.residual(above, level), outcome)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import weakref
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
@@ -13,6 +14,7 @@ from .bipolar import BipolarSystem, Unknowns
 from .bipolar_equations import Equations
 from .bipolar_newton import newton_bipolar
 from .bipolar_state import BipolarState
+from .solver import LinearSolver, check_forecast, two_carrier_solver
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -37,14 +39,20 @@ class Walker:
     system : BipolarSystem
     states : list of BipolarState
         Everything solved so far.
+    shared : LinearSolver, optional
+        The `solver` of a walker on the same mesh with the same contacts: its factors serve here as preconditioner.
     """
 
     system: BipolarSystem
     states: list[BipolarState] = field(default_factory=list)
+    shared: LinearSolver | None = field(default=None, repr=False)
 
     def __post_init__(self) -> None:
         self.system.conductors.check()
-        self.equations = Equations(self.system)
+        check_forecast(self.system.space, 2)
+        system = self.system  # and not self, so that the factors go with the walker
+        self.solver = self.shared or two_carrier_solver(system.space, lambda: Equations(system).spread)
+        self.equations = Equations(self.system, weakref.ref(self.solver))
 
     def at(self, voltages: Mapping[str, float]) -> BipolarState:
         """State at terminal voltages (frame of a p-type base).
