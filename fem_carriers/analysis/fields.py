@@ -9,6 +9,7 @@ import numpy as np
 from ..errors import Complaints
 from ..transport.coefficients import diffusivity
 from ..transport.generation import generation_rate
+from ..transport.probe import Probe
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -81,9 +82,7 @@ def values_at(problem: Problem, nodal: NDArray[np.float64], points_um: NDArray[n
             f"the point {_listed(points[:, outside][:, 0])} µm", f"points from {_listed(low)} to {_listed(high)} µm"
         )
         problems.raise_if_any()
-    inward = 1e-9 * (high - low)
-    inner = np.clip(points, (low + inward)[:, None], (high - inward)[:, None])
-    return np.asarray(problem.space.numbering.probes(inner * 1e-4) @ nodal)
+    return Probe(problem.space).values(nodal, points * 1e-4)
 
 
 def _listed(point: Any) -> str:

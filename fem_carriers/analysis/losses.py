@@ -147,6 +147,8 @@ def _recombination(state: BipolarState, split: Any) -> dict[tuple[str, str], flo
         basis = system.space.surfaces[name]
         rate = law(np.asarray(basis.interpolate(state.dn)))[0]
         rows["surface", name] = float((rate * np.asarray(basis.interpolate(split)) * basis.dx).sum())
+    for name, (weights, law) in system.edge_laws.items():
+        rows["surface", f"{name}: edge"] = float((weights * law(state.dn)[0]) @ split)
     for name, shunt in system.conductors.shunts.items():
         across = np.where(system.conductors.layer, split, 0.0)
         rows["surface", f"{name}: shunt"] = float(across @ (shunt @ across)) / ELEMENTARY_CHARGE_C

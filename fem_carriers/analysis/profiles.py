@@ -164,6 +164,8 @@ def _surface_losses(solution: Solution, names: list[str]) -> list[tuple[Any, Any
         found.append(
             (distance_um(problem, names, x), law(np.asarray(basis.interpolate(solution.state.dn)))[0] * basis.dx)
         )
+    at_nodes = distance_um(problem, names, problem.space.points_cm)
+    found += [(at_nodes, w * law(solution.state.dn)[0]) for w, law in solution.state.system.edge_laws.values()]
     return found + _bare_metal_losses(solution, names)
 
 

@@ -5,7 +5,8 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from ..errors import Complaints
-from .curve import Tracer, current_voltage
+from .curve import current_voltage
+from .tracer import Tracer
 
 if TYPE_CHECKING:
     from ..transport.problem import Problem

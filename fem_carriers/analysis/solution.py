@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from ..transport.newton import Outcome
     from ..transport.problem import Problem
     from ..transport.state import SolvedState
+    from .accuracy import Uncertainty
 
 
 @dataclass(frozen=True, eq=False)
@@ -36,16 +37,24 @@ class Solution:
         Where the generated carriers went, mA/cm² of cell area.
     warnings : tuple of str
         Where the model's assumptions are strained.
+    uncertainty : Uncertainty, optional
+        Half widths of the error bars by name; None where no target was asked for.
     """
 
     state: SolvedState
     ledger: Ledger
     warnings: tuple[str, ...] = ()
+    uncertainty: Uncertainty | None = None
 
     @property
     def problem(self) -> Problem:
         """The problem solved."""
         return self.state.system.problem
+
+    @property
+    def main_field(self) -> str:
+        """The nodal field that a picture shows by default."""
+        return "excess_density_per_cm3"
 
     @property
     def outcome(self) -> Outcome:
@@ -177,12 +186,24 @@ class Solution:
         values = {"generated_mA_per_cm2": self.ledger.generated_mA_per_cm2, "shaded_mA_per_cm2": o.shaded}
         values |= {f"collected_{t}_mA_per_cm2": v for t, v in self.collected_mA_per_cm2.items()}
         values |= {"unknowns": self.problem.space.size, "ledger_residual": self.ledger.relative_residual}
+        values |= {f"error_bar_{name}": bar for name, bar in (self.uncertainty or {}).items()}
         return pd.Series(values, name="solution")
 
     def __repr__(self) -> str:
         bias = ", ".join(f"{t} at {v:g} V" for t, v in self.voltage_V.items())
         head = f"Solution: {self.outcome}; {self.problem.space.size} unknowns" + (f"; {bias}" if bias else "")
-        return "\n".join([head, str(self.ledger), *(f"note: {w}" for w in self.warnings)])
+        bars = str(self.uncertainty) if self.uncertainty else "(no error bars: state target_error_percent)"
+        return "\n".join([head, str(self.ledger), bars, *(f"note: {w}" for w in self.warnings)])
+
+    @property
+    def headline(self) -> dict[str, float]:
+        """The numbers that carry error bars: collected currents; without a terminal the mean excess density."""
+        collected = {f"collected_{t}_mA_per_cm2": v for t, v in self.collected_mA_per_cm2.items()}
+        if collected:
+            return collected
+        bulk = self.problem.space.bulk
+        mean = (bulk.values(self.state.dn) * bulk.dx).sum() / bulk.dx.sum()
+        return {"mean_excess_density_per_cm3": float(mean)}
 
     def _repr_html_(self) -> str:
         notes = "".join(f"<p><em>{w}</em></p>" for w in self.warnings)

@@ -87,6 +87,9 @@ class Surface:
         excess-carrier form at 0 V.
     layer : DopedLayer, optional
     contact : Contact, optional
+    J02_edge_nA_per_cm : float
+        For an outer edge of the cell: adds J02 (√(np/ni²) − 1) per length of the line where it meets an opposite-type
+        layer, the recombination where the edge cuts through the space-charge region. Stated at 298.15 K.
     """
 
     J0_fA_per_cm2: Varying | None = None
@@ -95,6 +98,7 @@ class Surface:
     shunt_ohm_cm2: float | None = None
     layer: DopedLayer | None = None
     contact: Contact | None = None
+    J02_edge_nA_per_cm: float = 0.0
 
     __repr__ = checks.stated_repr
 
@@ -103,6 +107,7 @@ class Surface:
         check_recombination(problems, self.J0_fA_per_cm2, self.srv_cm_per_s, self.J02_nA_per_cm2)
         check_parts(problems, self.layer, self.contact)
         check_shunt(problems, self.shunt_ohm_cm2)
+        checks.positive(problems, "J02_edge_nA_per_cm", self.J02_edge_nA_per_cm, zero=True)
         problems.raise_if_any()
 
     @property
@@ -165,3 +170,19 @@ def check_depth(problems: Complaints, name: str, surface: Surface, thickness_um:
         depth = surface.layer.absorbing_depth_um
         given = f"{name}: absorbing_depth_um = {depth:g}"
         problems.unless(depth <= thickness_um, given, f"at most the thickness, {thickness_um:g} µm")
+
+
+def check_no_edge(problems: Complaints, name: str, surface: Surface) -> None:
+    """Complain about an edge current on a face, which has no edge of its own."""
+    given = f"{name}: J02_edge_nA_per_cm = {surface.J02_edge_nA_per_cm!r} on a face"
+    allowed = "an edge current on a side of the cell"
+    problems.unless(not surface.J02_edge_nA_per_cm, given, allowed, 'sides={"x_max": fc.Surface(...)}')
+
+
+def check_inner_surface(problems: Complaints, name: str, surface: Surface) -> None:
+    """Complain about what a surface inside the volume cannot carry."""
+    extra = {"layer": surface.layer, "contact": surface.contact, "shunt_ohm_cm2": surface.shunt_ohm_cm2}
+    extra["J02_edge_nA_per_cm"] = surface.J02_edge_nA_per_cm or None
+    given = ", ".join(key for key, value in extra.items() if value is not None)
+    allowed = "srv_cm_per_s, J0_fA_per_cm2 and J02_nA_per_cm2 there"
+    problems.unless(not given, f"{name}, which lies inside the volume, with {given}", allowed)

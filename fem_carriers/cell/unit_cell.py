@@ -10,13 +10,12 @@ from ..errors import Complaints, ModelWarning
 from . import checks
 from .base import Base
 from .face import Face
+from .inner import SIDES, InnerSurface, check_inner, inner_mapping
 from .light import Light
 from .masks import check_masks_on
 from .outlines import UNIT_DEPTH_UM, Frame
 from .plan import Layout, face_layout
-from .surface import Surface, check_depth, check_surface
-
-SIDES = ("x_min", "x_max", "y_min", "y_max")
+from .surface import Surface, check_depth, check_no_edge, check_surface
 
 
 @dataclass(frozen=True, repr=False)
@@ -37,6 +36,8 @@ class UnitCell:
     light : Light, optional
     symmetry : {"half", "periodic"}
         "half": the piece 0 ≤ x ≤ pitch/2 (and y likewise) between mirror planes. "periodic": the whole period.
+    inner : mapping of str to InnerSurface
+        Recombining planes inside the piece by name: grain boundaries, cracks.
 
     Raises
     ------
@@ -52,6 +53,7 @@ class UnitCell:
     sides: Mapping[str, Surface] = field(default_factory=dict)
     light: Light | None = None
     symmetry: str = "half"
+    inner: Mapping[str, InnerSurface] = field(default_factory=dict)
 
     __repr__ = checks.stated_repr
 
@@ -63,6 +65,7 @@ class UnitCell:
             sound &= checks.positive(problems, "pitch_y_um", self.pitch_y_um)
         sound &= checks.one_of(problems, "symmetry", self.symmetry, ("half", "periodic"))
         self._check_sides(problems)
+        object.__setattr__(self, "inner", inner_mapping(problems, self.inner))
         if sound:
             self._check_faces(problems)
         problems.raise_if_any()
@@ -100,10 +103,12 @@ class UnitCell:
             for region in layout.regions:
                 check_surface(problems, region.name, region.surface, self.base.doping_type)
                 check_depth(problems, region.name, region.surface, self.thickness_um)
+                check_no_edge(problems, region.name, region.surface)
             _warn_bare_metal(layout, self.base.doping_type)
         for name, surface in self.sides.items():
             if isinstance(surface, Surface):
                 check_surface(problems, name, surface, self.base.doping_type)
+        check_inner(problems, self)
         self._check_light(problems)
 
     def _check_light(self, problems: Complaints) -> None:

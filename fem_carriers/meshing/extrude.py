@@ -12,7 +12,7 @@ from ..units import UM
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from .plan_view import PlanMesh
+    from .plan_view import PlanMesh, QuadPlan
 
 PRISM_TETS = ((0, 1, 2, 5), (0, 1, 5, 4), (0, 4, 5, 3))
 """Tets of a prism with lower corners 0, 1, 2 in ascending rank and upper corners 3, 4, 5 above them."""
@@ -63,6 +63,39 @@ def extrude(plan: PlanMesh, depths_um: NDArray[np.float64], rank: NDArray[np.int
     layers = tets[:, None] + n_points * np.arange(depths_um.size - 1)[:, None, None]
     points = np.vstack([np.tile(plan.points_um, depths_um.size), np.repeat(depths_um, n_points)])
     return MeshTet(points * UM, layers.reshape(4, -1))
+
+
+def extrude_quads(plan: QuadPlan, depths_um: NDArray[np.float64]) -> Any:
+    """Hexahedra between horizontal copies of a plan-view mesh of quads.
+
+    Parameters
+    ----------
+    plan : QuadPlan
+        In µm.
+    depths_um : (n_levels,) float array
+        Ascending heights z of the levels, in µm.
+
+    Returns
+    -------
+    skfem.MeshHex
+        In cm. Point i of level k is number k·n_points + i.
+
+    Raises
+    ------
+    MeshError
+        For fewer than two or not ascending depths.
+    """
+    from skfem import MeshHex
+
+    depths_um = _ascending("depths_um", depths_um)
+    n_points = plan.points_um.shape[1]
+    around = {(0, 0): 0, (1, 0): 1, (1, 1): 2, (0, 1): 3}  # corners of a quad by reference coordinates
+    cells = np.stack(
+        [plan.quads[around[int(x), int(y)]] + n_points * int(z) for x, y, z in MeshHex.elem.refdom.p.T]
+    )  # between levels 0 and 1
+    layers = cells[:, None] + n_points * np.arange(depths_um.size - 1)[:, None]
+    points = np.vstack([np.tile(plan.points_um, depths_um.size), np.repeat(depths_um, n_points)])
+    return MeshHex(points * UM, layers.reshape(8, -1))
 
 
 def _orient(tets: NDArray[np.int64], plan: PlanMesh) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -16,6 +17,8 @@ if TYPE_CHECKING:
     from ..cell.plan import Layout
     from ..cell.unit_cell import UnitCell
 
+FIRST_STEP_PER_LEVEL = 5.0
+LARGEST_GROWTH = 25.0
 MILD = 10.0
 """Outlines where the flux stays bounded start this many times coarser than singular ones."""
 
@@ -28,10 +31,14 @@ class Fineness:
     ----------
     first_step_um : float
         Beside edges where the flux is singular: edges of junctions, of bare metal, of contacts.
+    mild_step_um : float
+        Beside outlines where the flux stays bounded.
     growth : float
         Ratio of neighbouring steps.
     largest_um : float
         In plan.
+    largest_share : float
+        Largest step as a share of a stretch between outlines.
     largest_depth_um : float
     plain_step_um : float
         First step below a face without singular edges, and beside a recombining side.
@@ -40,11 +47,32 @@ class Fineness:
     """
 
     first_step_um: float
+    mild_step_um: float
     growth: float
     largest_um: float
+    largest_share: float
     largest_depth_um: float
     plain_step_um: float
     circle_corners: int
+
+    def at_level(self, level: float) -> Fineness:
+        """A member of the family of meshes in which everything is refined together.
+
+        With quadratic elements the error of a current falls with the fourth power of the logarithm of the growth, and
+        in proportion to the first step beside an edge where the flux goes with r^-½. One level divides the first by
+        √2 and the second by 5, so that both errors fall four to five times.
+        """
+        width, first = 2 ** (-level / 2), self.first_step_um * FIRST_STEP_PER_LEVEL**-level
+        return dataclasses.replace(
+            self,
+            first_step_um=first,
+            mild_step_um=min(MILD * first, self.mild_step_um * MILD * width),
+            growth=min(self.growth**width, LARGEST_GROWTH),
+            largest_um=self.largest_um * width,
+            largest_share=min(self.largest_share * width, 1.0),
+            largest_depth_um=self.largest_depth_um * width,
+            plain_step_um=self.plain_step_um * width**2,
+        )
 
     @property
     def can_be_coarser(self) -> bool:
@@ -52,7 +80,7 @@ class Fineness:
         return self.first_step_um < 0.1 * min(self.largest_um, self.largest_depth_um)
 
 
-def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float | None) -> Fineness:
+def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float | None, level: float = 0.0) -> Fineness:
     """Default steps, from the smallest feature, the thickness and the diffusion length.
 
     Parameters
@@ -60,6 +88,8 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
     cell : UnitCell
     first_step_um, growth : float, optional
         Replace the defaults: 1/400 (2-D) or 1/40 (3-D) of the smallest feature; 2.2, or 2 for tets (dots, polygons).
+    level : float
+        Place in the family of meshes of which these are level 0; see `Fineness.at_level`.
 
     Raises
     ------
@@ -74,17 +104,20 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
         problems.unless(good, f"growth = {growth!r}", "a number above 1, at most 4", "2")
     problems.raise_if_any()
     flat = cell.dimension == 2
-    first = first_step_um or smallest_feature_um(cell) / (400 if flat else 40)
+    first = first_step_um or smallest_feature_um(cell) / (400 if flat else 200)
     width = max(cell.frame.x[1] - cell.frame.x[0], 0.0 if flat else cell.frame.y[1] - cell.frame.y[0])
     short = diffusion_length_um(cell.base, cell) / 3
-    return Fineness(
+    chosen = Fineness(
         first_step_um=first,
-        growth=growth or (2.0 if _has_other_than_boxes(cell) else 2.2),
-        largest_um=width / 6,
-        largest_depth_um=cell.thickness_um / (10 if flat else 5),
+        mild_step_um=MILD * first,
+        growth=growth or (2.2 if flat else 2.6),
+        largest_um=width / (8 if flat else 5),
+        largest_share=0.25 if flat else 0.5,
+        largest_depth_um=cell.thickness_um / (10 if flat else 8),
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),
         circle_corners=circle_corners(first, cell),
-    )
+    ).at_level(level)
+    return dataclasses.replace(chosen, circle_corners=circle_corners(chosen.first_step_um, cell))
 
 
 def _has_other_than_boxes(cell: UnitCell) -> bool:
@@ -93,9 +126,13 @@ def _has_other_than_boxes(cell: UnitCell) -> bool:
 
 
 def circle_corners(first_step_um: float, cell: UnitCell) -> int:
-    """Corners of a full circle, a multiple of 8 from 24 to 96 that grows as the first step shrinks."""
+    """Corners of a full circle, a multiple of 8 from 16 to 96 that grows as the first step shrinks.
+
+    The polygon has the area of the circle; the current into it then differs by 2e-4 for 16 corners, less for more, and
+    every corner is a grid line.
+    """
     ratio = smallest_feature_um(cell) / first_step_um
-    return int(8 * round(min(max(24.0, 4 * math.sqrt(ratio)), 96.0) / 8))
+    return int(8 * round(min(max(16.0, 2.4 * math.sqrt(ratio)), 96.0) / 8))
 
 
 def singular_groups(layout: Layout, base_type: str) -> list[Any]:

@@ -28,6 +28,7 @@ def graded_axis(
     growth: float,
     largest: float,
     fixed: Sequence[float] = (),
+    largest_share: float = 1.0,
 ) -> NDArray[np.float64]:
     """Grid on [low, high] with geometric series of steps beside the fine points.
 
@@ -49,6 +50,8 @@ def graded_axis(
         Largest step.
     fixed : sequence of float
         Further positions in [low, high] that must be nodes, without grading.
+    largest_share : float
+        Largest step as a share of the distance between the prescribed positions on its two sides.
 
     Returns
     -------
@@ -69,7 +72,7 @@ def graded_axis(
     nodes = _prescribed(low, high, [p for p, _ in fine_points], fixed)
     steps = _step_at(nodes, fine_points, growth, largest)
     parts = [
-        _Interval(a, b, h_a, h_b, growth, largest).nodes()
+        _Interval.between(a, b, h_a, h_b, growth, min(largest, largest_share * (b - a))).nodes()
         for a, b, h_a, h_b in zip(nodes[:-1], nodes[1:], steps[:-1], steps[1:], strict=True)
     ]
     return np.concatenate([*(part[:-1] for part in parts), nodes[-1:]])
@@ -126,6 +129,12 @@ class _Interval:
     h_b: float
     growth: float
     largest: float
+
+    @classmethod
+    def between(cls, a: float, b: float, h_a: float, h_b: float, growth: float, largest: float) -> _Interval:
+        """With the steps at the ends not above the largest one."""
+        cap = _cap(growth, largest)
+        return cls(a, b, min(h_a, cap), min(h_b, cap), growth, largest)
 
     @property
     def slope(self) -> float:

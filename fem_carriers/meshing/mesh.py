@@ -63,6 +63,10 @@ class Mesh:
         """Area of a named surface in cm² (in 2-D: length × 1 cm of depth)."""
         return float(facet_areas(self.cells, self.surfaces[name]).sum())
 
+    def inner_share(self, name: str) -> float:
+        """Share of a named surface's facets that lie inside the volume, between two cells."""
+        return float((self.cells.f2t[1, self.surfaces[name]] >= 0).mean()) if self.surfaces[name].size else 0.0
+
     def volume_cm3(self, name: str | None = None) -> float:
         """Volume in cm³ of a named volume, or of everything (in 2-D: area × 1 cm)."""
         sizes = cell_sizes(self.cells)

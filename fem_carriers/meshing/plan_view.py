@@ -40,6 +40,22 @@ class PlanMesh:
     triangles: NDArray[np.int64]
 
 
+@dataclass(frozen=True, eq=False)
+class QuadPlan:
+    """Convex quads in plan view.
+
+    Parameters
+    ----------
+    points_um : (2, n_points) float array
+        Coordinates x, y in µm.
+    quads : (4, n_quads) int array
+        Corners, counter-clockwise.
+    """
+
+    points_um: NDArray[np.float64]
+    quads: NDArray[np.int64]
+
+
 def circle(center_um: tuple[float, float], radius_um: float, segments: int) -> Any:
     """Regular polygon with the area of a circle, π r², so that contact areas are exact.
 

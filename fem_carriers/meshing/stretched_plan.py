@@ -12,20 +12,24 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .islands import SAME_UM, Island, bulge
-from .plan_view import PlanMesh
+from .plan_view import PlanMesh, QuadPlan
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from numpy.typing import NDArray
 
+CONVEX = 0.1
+"""Smallest sine of a quad's corner; the corner of a dot's rectangle has 180° less a step of the polygon."""
+
 
 def stretched_plan(
     x_um: NDArray[np.float64], y_um: NDArray[np.float64], islands: Sequence[Island], periodic: tuple[bool, bool]
-) -> PlanMesh | None:
-    """Triangles of the grid x × y, bent onto the islands' circles.
+) -> QuadPlan | PlanMesh | None:
+    """Cells of the grid x × y, bent onto the islands' circles.
 
-    Each cell is cut along the diagonal that leaves the wider smallest angle; where both are alike, diagonals alternate.
+    Where a cell is no longer clearly convex, each is cut into two triangles along the diagonal that leaves the wider
+    smallest angle; where both are alike, diagonals alternate.
 
     Parameters
     ----------
@@ -37,7 +41,7 @@ def stretched_plan(
 
     Returns
     -------
-    PlanMesh, or None
+    QuadPlan, PlanMesh, or None
         None if a triangle would be folded, a side would bend, or periodic sides would differ.
     """
     points = np.stack(np.meshgrid(x_um, y_um, indexing="ij")).reshape(2, -1)
@@ -46,6 +50,9 @@ def stretched_plan(
     if np.abs(kept - moved).max() > SAME_UM:
         return None
     moved = kept
+    quads = _quads(x_um.size, y_um.size)
+    if _smallest_sine(moved[:, quads]) > CONVEX:
+        return QuadPlan(moved, quads)
     plan = PlanMesh(moved, _triangles(moved, x_um.size, y_um.size))
     a, b, c = (moved[:, corner] for corner in plan.triangles)
     doubled = (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
@@ -121,11 +128,24 @@ def _sides_kept(
     return moved
 
 
-def _triangles(points: NDArray[np.float64], nx: int, ny: int) -> NDArray[np.int64]:
-    """Corners, counter-clockwise, of two triangles per cell; point (i, j) has number i·ny + j."""
+def _quads(nx: int, ny: int) -> NDArray[np.int64]:
+    """Corners of the cells, counter-clockwise; point (i, j) has number i·ny + j."""
     i, j = (index.ravel() for index in np.meshgrid(np.arange(nx - 1), np.arange(ny - 1), indexing="ij"))
     a = i * ny + j
-    quad = np.stack([a, a + ny, a + ny + 1, a + 1])  # counter-clockwise
+    return np.stack([a, a + ny, a + ny + 1, a + 1])
+
+
+def _smallest_sine(corners: NDArray[np.float64]) -> float:
+    """Smallest sine of an inner angle of quads with corners (2, 4, n); negative if one is not convex."""
+    ahead, back = np.roll(corners, -1, axis=1) - corners, np.roll(corners, 1, axis=1) - corners
+    turn = ahead[0] * back[1] - ahead[1] * back[0]
+    return float((turn / (np.hypot(*ahead) * np.hypot(*back))).min())
+
+
+def _triangles(points: NDArray[np.float64], nx: int, ny: int) -> NDArray[np.int64]:
+    """Corners, counter-clockwise, of two triangles per cell."""
+    quad = _quads(nx, ny)
+    i, j = quad[0] // ny, quad[0] % ny
     rising = quad[[[0, 1, 2], [0, 2, 3]]]  # along the diagonal 0-2
     falling = quad[[[0, 1, 3], [1, 2, 3]]]
     gain = _shape(points, rising) - _shape(points, falling)

@@ -10,12 +10,13 @@ import numpy as np
 
 from ..cell.masks import Spot
 from ..errors import ModelWarning
-from .extrude import extrude, periodic_rank, tensor_mesh
-from .fineness import MILD, Fineness, choose_fineness, singular_groups
+from .extrude import extrude, extrude_quads, periodic_rank, tensor_mesh
+from .fineness import FIRST_STEP_PER_LEVEL, Fineness, choose_fineness, singular_groups
 from .grading import graded_axis
+from .inner import inner_depths, inner_lines, name_inner
 from .islands import find_dots, fit_islands, island_positions, on_dots
 from .mesh import Mesh
-from .plan_view import triangulate
+from .plan_view import QuadPlan, triangulate
 from .stretched_plan import stretched_plan
 
 if TYPE_CHECKING:
@@ -38,7 +39,7 @@ class Outlines:
     Parameters
     ----------
     singular, mild, plain : list
-        Graded to the first step; to `MILD` times that; not graded (shading and light masks).
+        Graded to the first step; to the mild step; not graded (shading and light masks).
     """
 
     singular: list[Any]
@@ -51,7 +52,9 @@ class Outlines:
         return self.singular + self.mild + self.plain
 
 
-def mesh_unit_cell(cell: UnitCell, first_step_um: float | None = None, growth: float | None = None) -> Mesh:
+def mesh_unit_cell(
+    cell: UnitCell, first_step_um: float | None = None, growth: float | None = None, level: float = 0.0
+) -> Mesh:
     """Mesh the modelled piece.
 
     Parameters
@@ -61,6 +64,8 @@ def mesh_unit_cell(cell: UnitCell, first_step_um: float | None = None, growth: f
         Step beside singular edges.
     growth : float, optional
         Ratio of neighbouring steps away from them.
+    level : float
+        Place in the family of meshes around these steps; see `Fineness.at_level`.
 
     Returns
     -------
@@ -72,12 +77,13 @@ def mesh_unit_cell(cell: UnitCell, first_step_um: float | None = None, growth: f
     ModelWarning
         The default first step was raised to keep the mesh below `LARGEST_DEFAULT_POINTS`.
     """
-    fineness = choose_fineness(cell, first_step_um, growth)
+    fineness = choose_fineness(cell, first_step_um, growth, level)
     mesh = _mesh(cell, fineness)
-    while first_step_um is None and mesh.cells.p.shape[1] > LARGEST_DEFAULT_POINTS and fineness.can_be_coarser:
-        fineness = choose_fineness(cell, 2 * fineness.first_step_um, growth)
+    limited = first_step_um is None and level == (0 if cell.dimension == 2 else -1)
+    while limited and mesh.cells.p.shape[1] > LARGEST_DEFAULT_POINTS and fineness.can_be_coarser:
+        fineness = choose_fineness(cell, 2 * fineness.first_step_um * FIRST_STEP_PER_LEVEL**level, growth, level)
         mesh = _mesh(cell, fineness)
-    if first_step_um is None and fineness.first_step_um > choose_fineness(cell, None, growth).first_step_um:
+    if limited and fineness.first_step_um > choose_fineness(cell, None, growth, level).first_step_um:
         warnings.warn(
             f"many patches: the first step of the mesh was raised to {fineness.first_step_um:.3g} µm to keep it small; "
             "state first_step_um for a finer mesh, or model a smaller piece.",
@@ -96,7 +102,8 @@ def _mesh(cell: UnitCell, fineness: Fineness) -> Mesh:
         cells = tensor_mesh(*axes, depths)
     else:
         cells = _extruded(cell, layouts, lines, depths, fineness)
-    return Mesh(cells, name_surfaces(cells, cell, layouts), {"base": np.arange(cells.t.shape[1])})
+    surfaces = name_surfaces(cells, cell, layouts) | name_inner(cells, cell)
+    return Mesh(cells, surfaces, {"base": np.arange(cells.t.shape[1])})
 
 
 def collect_outlines(cell: UnitCell, layouts: dict[str, Layout]) -> Outlines:
@@ -108,6 +115,7 @@ def collect_outlines(cell: UnitCell, layouts: dict[str, Layout]) -> Outlines:
         singular += [_inner_lines(g, cell) for g in singular_groups(layout, cell.base.doping_type)]
         mild += [_inner_lines(r.shape, cell) for r in layout.regions]
         plain.append(_inner_lines(layout.opaque, cell))
+    mild += inner_lines(cell)
     for source in cell.light.sources if cell.light is not None else ():
         fitted = [m for m in source.mask if cell.dimension == 2 or not isinstance(m, Spot)]
         plain += [_inner_lines(m.outline(cell.dimension), cell) for m in fitted]
@@ -147,7 +155,7 @@ def plan_axis(
     """Graded grid along x or y, µm; `more` adds positions with first steps, and positions that are nodes."""
     low, high = cell.frame.x if axis == "x" else cell.frame.y
     fine = [(p, fineness.first_step_um) for p in _positions(lines.singular, axis)] + more[0]
-    fine += [(p, MILD * fineness.first_step_um) for p in _positions(lines.mild, axis)]
+    fine += [(p, fineness.mild_step_um) for p in _positions(lines.mild, axis)]
     for side, position in ((f"{axis}_min", low), (f"{axis}_max", high)):
         if side in cell.sides:
             fine.append((position, fineness.plain_step_um))
@@ -155,7 +163,7 @@ def plan_axis(
     if axis in cell.periodic_axes:
         fine = _also_across(fine, low, high)
     fixed = [p for p in _positions(lines.plain, axis) + more[1] if low < p < high]
-    return graded_axis(low, high, fine, fineness.growth, fineness.largest_um, fixed)
+    return graded_axis(low, high, fine, fineness.growth, fineness.largest_um, fixed, fineness.largest_share)
 
 
 def _also_across(fine: list[tuple[float, float]], low: float, high: float) -> list[tuple[float, float]]:
@@ -174,13 +182,13 @@ def _positions(lines: list[Any], axis: str) -> list[float]:
 
 def depth_axis(cell: UnitCell, layouts: dict[str, Layout], fineness: Fineness) -> NDArray[np.float64]:
     """Graded grid along z from rear to front, µm."""
-    fine = []
+    fine = inner_depths(cell, fineness)
     for side, position in (("rear", 0.0), ("front", cell.thickness_um)):
         layout = layouts[side]
         if len(singular_groups(layout, cell.base.doping_type)) > 1:
             step = fineness.first_step_um
         elif len(layout.regions) > 1:
-            step = min(MILD * fineness.first_step_um, fineness.plain_step_um)
+            step = min(fineness.mild_step_um, fineness.plain_step_um)
         else:
             step = fineness.plain_step_um
         fine.append((position, step))
@@ -190,13 +198,17 @@ def depth_axis(cell: UnitCell, layouts: dict[str, Layout], fineness: Fineness) -
 def _extruded(
     cell: UnitCell, layouts: dict[str, Layout], lines: Outlines, depths: NDArray[np.float64], fineness: Fineness
 ) -> Any:
-    """Plan-view triangles fitted to both faces' outlines, through the graded depths."""
+    """A plan-view mesh fitted to both faces' outlines, through the graded depths."""
     periodic = "x" in cell.periodic_axes, "y" in cell.periodic_axes
     plan = _stretched(cell, lines, fineness, periodic) or _isotropic(cell, layouts, lines, fineness, periodic)
+    if isinstance(plan, QuadPlan):
+        return extrude_quads(plan, depths)
     return extrude(plan, depths, periodic_rank(plan, *periodic) if any(periodic) else None)
 
 
-def _stretched(cell: UnitCell, lines: Outlines, fineness: Fineness, periodic: tuple[bool, bool]) -> PlanMesh | None:
+def _stretched(
+    cell: UnitCell, lines: Outlines, fineness: Fineness, periodic: tuple[bool, bool]
+) -> QuadPlan | PlanMesh | None:
     """A grid bent onto dots, if every oblique outline is a dot's."""
     dots = find_dots(cell, fineness.circle_corners)
     ends = _segments(lines.all)
@@ -213,7 +225,7 @@ def _round(
 ) -> tuple[list[tuple[float, float]], list[float]]:
     """(Position, first step) where an axis is graded towards circles, and positions of other corners."""
     fine, fixed = [], []
-    steps = (lines.singular, fineness.first_step_um), (lines.mild, MILD * fineness.first_step_um)
+    steps = (lines.singular, fineness.first_step_um), (lines.mild, fineness.mild_step_um)
     for island in islands:
         for radius, sides, corners in island_positions(island, axis):
             step = next((s for group, s in steps if island.dots.follows(group, radius)), None)
