@@ -17,13 +17,16 @@ from .vtk_cells import VtkCells, vtk_cells, vtk_facets
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..analysis.collection import CollectionProbability
     from ..analysis.solution import Solution
     from ..transport.problem import Problem
 
 CELL_FIELDS = ("carrier_flux_mA_per_cm2", "diffusion_length_um")
 
 
-def write_fields(solution: Solution, path: str | Path, *, fields: Sequence[str] | None = None) -> Path:
+def write_fields(
+    solution: Solution | CollectionProbability, path: str | Path, *, fields: Sequence[str] | None = None
+) -> Path:
     """Write fields on the mesh, in µm, for an ordinary viewer.
 
     Quadratic elements become quadratic cells (triangle6, quad9, tetra10, hexahedron27), so the file holds exactly the
@@ -38,7 +41,7 @@ def write_fields(solution: Solution, path: str | Path, *, fields: Sequence[str] 
 
     Parameters
     ----------
-    solution : Solution
+    solution : Solution or CollectionProbability
     path : str or Path
         Ends in .vtu or .xdmf; the folder must exist.
     fields : sequence of str, optional
@@ -69,7 +72,7 @@ def write_fields(solution: Solution, path: str | Path, *, fields: Sequence[str] 
     return path
 
 
-def _chosen(solution: Solution, fields: Sequence[str] | None) -> list[str]:
+def _chosen(solution: Solution | CollectionProbability, fields: Sequence[str] | None) -> list[str]:
     known = [*solution.nodal_fields, *CELL_FIELDS]
     names = known if fields is None else [fields] if isinstance(fields, str) else list(fields)
     problems = Complaints("write_fields")
@@ -79,7 +82,7 @@ def _chosen(solution: Solution, fields: Sequence[str] | None) -> list[str]:
     return names
 
 
-def cell_fields(solution: Solution) -> dict[str, NDArray[np.float64]]:
+def cell_fields(solution: Solution | CollectionProbability) -> dict[str, NDArray[np.float64]]:
     """Cell averages by name: the carrier flux, (n_cells, 3), and the diffusion length, (n_cells,), NaN if infinite."""
     flux = solution.carrier_flux_mA_per_cm2
     length = solution.diffusion_length_um
@@ -90,7 +93,7 @@ def cell_fields(solution: Solution) -> dict[str, NDArray[np.float64]]:
     }
 
 
-def provenance(solution: Solution, fields: Sequence[str]) -> dict[str, Any]:
+def provenance(solution: Solution | CollectionProbability, fields: Sequence[str]) -> dict[str, Any]:
     """What the fields come from, ready for JSON: version, units, ledger, voltages, names behind the numbers."""
     from .. import __version__
 

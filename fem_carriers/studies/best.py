@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from ..analysis.accuracy import with_bar
 from ..errors import Complaints
 from ..units import split_name
 
@@ -32,6 +35,11 @@ class Best:
         The best point is the first or last one: the true optimum may lie beyond.
     flat_from_is_end, flat_to_is_end : bool
         The flat range goes on to the end of what was swept, and perhaps beyond.
+    location_bar, value_bar : float
+        Half widths of the error bars: what the points' discretisation errors can do, and how far the parabola's top is
+        from that of a polynomial through up to five points around it. NaN where the table has no error bars.
+    tied : tuple of float
+        Points whose value cannot be told from the best point's within the error bars, in the order of x.
     """
 
     variable: str
@@ -44,6 +52,9 @@ class Best:
     at_end: bool
     flat_from_is_end: bool
     flat_to_is_end: bool
+    location_bar: float = math.nan
+    value_bar: float = math.nan
+    tied: tuple[float, ...] = ()
 
     def __str__(self) -> str:
         name, unit = split_name(self.variable)
@@ -51,10 +62,12 @@ class Best:
         low = f"{self.flat_from:.4g}" + (" (end of the range)" if self.flat_from_is_end else "")
         high = f"{self.flat_to:.4g} {unit}".rstrip() + (" (end of the range)" if self.flat_to_is_end else "")
         text = (
-            f"best {name.replace('_', ' ')} {self.location:.4g} {unit}".rstrip()
-            + f": {self.value:.4g} {value_unit}".rstrip()
+            f"best {name.replace('_', ' ')} {with_bar(self.location, self.location_bar, 4)} {unit}".rstrip()
+            + f": {with_bar(self.value, self.value_bar, 4)} {value_unit}".rstrip()
         )
         text += f"; within {self.within_percent:g} % from {low} to {high}"
+        if len(self.tied) > 1:
+            text += f"; {', '.join(f'{x:.4g}' for x in self.tied)} {unit} cannot be told apart within their error bars"
         return f"{text}; the best is at the end of the swept range and may lie beyond" if self.at_end else text
 
 
@@ -79,33 +92,78 @@ def best_point(table: pd.DataFrame, x: str, y: str, within_percent: float = 0.5)
     InputError
         A column that is not there, several rows for one `x`, or no result.
     """
-    at, value = _curve(table, x, y, within_percent)
+    at, value, bars = _curve(table, x, y, within_percent)
     k = int(np.argmax(value))
+    tied = tuple(float(x) for x in at[value + bars >= value[k] - bars[k]])
+    place_bar, value_bar = _place_bar(at, value, bars, k), float(bars[k])
     at_end = k in (0, at.size - 1)
     if not at_end:
+        finer = _top_of_more(at, value, k)
         at, value, k = _with_top(at, value, k)
+        place_bar, value_bar = place_bar + abs(at[k] - finer[0]), value_bar + abs(value[k] - finer[1])
     location, top = float(at[k]), float(value[k])
     level = top - abs(top) * within_percent / 100
     low, low_end = _reach(-at[::-1], value[::-1], at.size - 1 - k, level)
     high, high_end = _reach(at, value, k, level)
-    return Best(x, y, location, top, -low, high, within_percent, at_end, low_end, high_end)
+    return Best(x, y, location, top, -low, high, within_percent, at_end, low_end, high_end, place_bar, value_bar, tied)
+
+
+def distinguishable(first: Mapping[str, float], second: Mapping[str, float], quantity: str) -> bool:
+    """Whether two designs differ by more than their error bars allow.
+
+    Parameters
+    ----------
+    first, second : mapping of str to float
+        Rows of a table with the columns `quantity` and ``error_bar_<quantity>``.
+    quantity : str
+
+    Returns
+    -------
+    bool
+
+    Raises
+    ------
+    InputError
+        A column that is not there.
+    """
+    bar = f"error_bar_{quantity}"
+    problems = Complaints("distinguishable")
+    for row in (first, second):
+        for column in (quantity, bar):
+            problems.unless(column in row, f"no column {column!r}", "rows with values and error bars")
+    problems.raise_if_any()
+    return abs(first[quantity] - second[quantity]) > first[bar] + second[bar]
+
+
+def _place_bar(x: Any, y: Any, bars: Any, k: int) -> float:
+    """How far the top of the parabola moves if every value moves within its bar, to first order."""
+    if k in (0, x.size - 1) or not np.isfinite(bars).all():
+        return math.nan
+    x, y, bars = (values[k - 1 : k + 2] for values in (x, y, bars))
+    a, b = _parabola(x, y)
+    moves = [_parabola(x, e) for e in np.eye(3)]  # dx = −db/(2a) + b da/(2a²)
+    return float(
+        sum(abs(-db / (2 * a) + b * da / (2 * a * a)) * bar for (da, db), bar in zip(moves, bars, strict=True))
+    )
 
 
 def _curve(
     table: pd.DataFrame, x: str, y: str, within_percent: float
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Points with a result, x rising."""
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Points with a result, x rising, and their error bars (NaN where there are none)."""
     problems = Complaints("best_point")
     for column in (x, y):
         problems.unless(column in table, f"column {column!r}", f"one of {', '.join(map(str, table.columns))}")
     problems.unless(within_percent > 0, f"within_percent = {within_percent!r}", "a number above 0")
     problems.raise_if_any()
-    rows = table[[x, y]].astype(float).dropna().sort_values(x)
+    bar = f"error_bar_{y}"
+    rows = table[[x, y]].assign(bar=table.get(bar, math.nan)).astype(float)
+    rows = rows.dropna(subset=[x, y]).sort_values(x)
     given = f"several rows of the same {x}"
     problems.unless(bool(rows[x].is_unique), given, "one row each", "select rows, e.g. table[table[...] == ...]")
     problems.unless(len(rows) > 0, f"no row with {x} and {y}", "one row or more with a result")
     problems.raise_if_any()
-    return rows[x].to_numpy(), rows[y].to_numpy()
+    return rows[x].to_numpy(), rows[y].to_numpy(), rows.bar.to_numpy()
 
 
 def _with_top(x: Any, y: Any, k: int) -> tuple[NDArray[np.float64], NDArray[np.float64], int]:
@@ -117,6 +175,20 @@ def _with_top(x: Any, y: Any, k: int) -> tuple[NDArray[np.float64], NDArray[np.f
         return np.where(np.arange(x.size) == k, top[0], x), np.where(np.arange(x.size) == k, top[1], y), k
     place = k + (step > 0)
     return np.insert(x, place, top[0]), np.insert(y, place, top[1]), place
+
+
+def _top_of_more(x: Any, y: Any, k: int) -> tuple[float, float]:
+    """Top of the polynomial through up to five points around the highest one; NaN with fewer than four points."""
+    if x.size < 4:
+        return math.nan, math.nan
+    first = min(max(k - 2, 0), max(x.size - 5, 0))
+    near = slice(first, first + 5)
+    width = x[k + 1] - x[k - 1]
+    polynomial = np.poly1d(np.polyfit((x[near] - x[k]) / width, y[near], x[near].size - 1))
+    low, high = (x[k - 1] - x[k]) / width, (x[k + 1] - x[k]) / width
+    tops = [r.real for r in polynomial.deriv().roots if abs(r.imag) < 1e-9 and low < r.real < high]
+    top = max(tops, key=polynomial, default=math.nan)
+    return float(x[k] + top * width), float(polynomial(top))
 
 
 def _parabola(x: Any, y: Any) -> tuple[float, float]:

@@ -10,6 +10,8 @@ from typing import TYPE_CHECKING, Any
 from ..errors import Complaints
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from ..analysis.curve import CurrentVoltage
     from ..analysis.ledger import Ledger
     from ..analysis.solution import Solution
@@ -19,15 +21,18 @@ TERMINAL_VALUES = ("cell_current_mA_per_cm2", "cell_voltage_V", "power_mW_per_cm
 
 
 def collected_current(
-    cell: UnitCell, first_step_um: float | None = None, growth: float | None = None
+    cell: UnitCell,
+    first_step_um: float | None = None,
+    growth: float | None = None,
+    target_error_percent: float | None = None,
 ) -> dict[str, float]:
-    """Mesh a cell, solve the excess-carrier form at 0 V, and say where photons and carriers went.
+    """Solve the excess-carrier form of a cell at 0 V, and say where photons and carriers went.
 
     Parameters
     ----------
     cell : UnitCell
-    first_step_um, growth : float, optional
-        Of the mesh; as for `problem`.
+    first_step_um, growth, target_error_percent : float, optional
+        As for `solve_excess`.
 
     Returns
     -------
@@ -39,9 +44,9 @@ def collected_current(
     InputError, MeshError, SolverError
     """
     from ..analysis.solve import solve_excess
-    from ..transport.build import problem
 
-    return solution_columns(solve_excess(problem(cell, first_step_um=first_step_um, growth=growth)))
+    options = {"first_step_um": first_step_um, "growth": growth, "target_error_percent": target_error_percent}
+    return solution_columns(solve_excess(cell, **options, progress=False))  # type: ignore[arg-type]
 
 
 def solution_columns(solution: Solution) -> dict[str, float]:
@@ -58,7 +63,8 @@ def solution_columns(solution: Solution) -> dict[str, float]:
     -------
     dict of str to float
         Light; collected per terminal; lost per bulk channel (``lost_base_Auger_mA_per_cm2``) and surface
-        (``lost_front_finger_mA_per_cm2``); collection efficiency, injection ratio, unknowns, ledger residual.
+        (``lost_front_finger_mA_per_cm2``); collection efficiency, error bars, injection ratio, unknowns, ledger
+        residual.
     """
     ledger, optics = solution.ledger, solution.optics
     columns = {
@@ -70,6 +76,7 @@ def solution_columns(solution: Solution) -> dict[str, float]:
     generated = ledger.generated_mA_per_cm2
     columns["collection_efficiency_percent"] = 100 * collected / generated if generated > 0 else math.nan
     columns |= {name: getattr(solution, name) for name in TERMINAL_VALUES if hasattr(solution, name)}
+    columns |= {f"error_bar_{name}": bar for name, bar in (solution.uncertainty or {}).items()}
     return columns | {
         "injection_ratio": solution.injection_ratio,
         "unknowns": solution.problem.space.size,
@@ -151,6 +158,42 @@ def result_columns(result: Any) -> dict[str, float]:
         problems.unless(value is not None, f"a result {name!r} that is not a number", _ALLOWED)
     problems.raise_if_any()
     return columns  # type: ignore[return-value]
+
+
+def with_bars(table: pd.DataFrame, columns: Mapping[str, str]) -> pd.DataFrame:
+    """Columns of a table under new headings for print, as "value ± bar" where the table has an error bar.
+
+    Parameters
+    ----------
+    table : pandas.DataFrame
+        Of a sweep.
+    columns : mapping of column to heading
+
+    Returns
+    -------
+    pandas.DataFrame
+        Texts where there are error bars, else the values.
+
+    Raises
+    ------
+    InputError
+        A column that is not there.
+    """
+    import pandas as pd
+
+    from ..analysis.accuracy import with_bar
+
+    problems = Complaints("with_bars")
+    for name in columns:
+        problems.unless(name in table, f"column {name!r}", f"one of {', '.join(map(str, table.columns))}")
+    problems.raise_if_any()
+    shown = {}
+    for name, heading in columns.items():
+        bars = table.get(f"error_bar_{name}")
+        shown[heading] = (
+            table[name] if bars is None else [with_bar(*row) for row in zip(table[name], bars, strict=True)]
+        )
+    return pd.DataFrame(shown, index=table.index)
 
 
 _ALLOWED = "a mapping of names to numbers, a solution, or an object with a summary"

@@ -35,7 +35,9 @@ CENTER = {"center_x_um": 0, "center_y_um": 1}
 
 
 @dataclass(frozen=True)
-class _Place:
+class Place:
+    """Where an input stands: the description that holds it, and its field (or a coordinate of its centre)."""
+
     node: Node
     name: str
 
@@ -98,14 +100,25 @@ def check_paths(cell: UnitCell, paths: Iterable[str]) -> None:
     _located(cell, _nodes(cell), paths)
 
 
+def places_of(cell: UnitCell, paths: Iterable[str]) -> dict[str, Place]:
+    """Where the inputs at these paths stand.
+
+    Raises
+    ------
+    InputError
+        Unknown paths, or two for one input.
+    """
+    return _located(cell, _nodes(cell), paths)
+
+
 def changed(cell: UnitCell, changes: Mapping[str, Any]) -> UnitCell:
     """A new cell with all changes applied together, validated once.
 
     Paths start at the cell: ``pitch_um``, ``base.lifetime_us``, ``front.J0_fA_per_cm2`` (or ``front.surface.…``: where
     no patch lies), ``front.finger.width_um`` (a patch by its name), ``front.finger.layer.sheet_resistance_ohm_per_sq``,
     ``front.finger.contact.contact_resistivity_mohm_cm2``, ``rear.dot.center_x_um``, ``sides.x_max.srv_cm_per_s``,
-    ``light.suns`` (``light.0.suns`` where there are several sources). An input that excludes another (resistivity and
-    doping, J0 and srv, lifetime and tau) replaces it.
+    ``inner.grain_boundary.x_um``, ``light.suns`` (``light.0.suns`` where there are several sources). An input that
+    excludes another (resistivity and doping, J0 and srv, lifetime and tau) replaces it.
 
     Parameters
     ----------
@@ -152,6 +165,7 @@ def _nodes(cell: UnitCell) -> dict[Node, Any]:
             nodes |= _with_parts((side, patch.name), patch, _ground(cell, (side, patch.name)))
     for side, surface in cell.sides.items():
         nodes |= _with_parts(("sides", side), surface, surface)
+    nodes |= {("inner", name): plane for name, plane in cell.inner.items()}
     for i, source in enumerate(cell.light.sources if cell.light is not None else ()):
         nodes["light", str(i)] = source
     return nodes
@@ -170,14 +184,14 @@ def _ground(cell: UnitCell, node: Node) -> Any:
     return next((r.surface for r in cell.layout(node[0]).regions if r.name == name), None)
 
 
-def _places(nodes: Mapping[Node, Any]) -> dict[str, _Place]:
+def _places(nodes: Mapping[Node, Any]) -> dict[str, Place]:
     """Places by their full path."""
     places = {}
     for node, owner in nodes.items():
         for name in _numeric(owner):
             full = ".".join("surface" if key == "" else key for key in (*node, name))
             if full not in places or node[1:2] != ("",):  # a patch called "surface" goes before the surface itself
-                places[full] = _Place(node, name)
+                places[full] = Place(node, name)
     return places
 
 
@@ -194,10 +208,10 @@ def _takes_number(field: dataclasses.Field[Any]) -> bool:
     return bool({"float", "Varying"} & {part.strip() for part in str(field.type).split("|")})
 
 
-def _located(cell: UnitCell, nodes: Mapping[Node, Any], paths: Iterable[str]) -> dict[str, _Place]:
+def _located(cell: UnitCell, nodes: Mapping[Node, Any], paths: Iterable[str]) -> dict[str, Place]:
     """Place of every path; refuses unknown ones and two paths to one place."""
     places = _places(nodes)
-    found: dict[str, _Place] = {}
+    found: dict[str, Place] = {}
     problems = Complaints("path")
     for path in paths:
         place = next((places[full] for full in _spellings(cell, path) if full in places), None)
@@ -222,7 +236,7 @@ def _spellings(cell: UnitCell, path: str) -> list[str]:
     return spellings
 
 
-def _short(cell: UnitCell, place: _Place) -> str:
+def _short(cell: UnitCell, place: Place) -> str:
     """The shortest path to a place."""
     keys = [key for key in (*place.node, place.name) if key != ""]
     if keys[0] == "light" and cell.light is not None and len(cell.light.sources) == 1:
@@ -230,7 +244,7 @@ def _short(cell: UnitCell, place: _Place) -> str:
     return ".".join(keys)
 
 
-def _help(cell: UnitCell, places: Mapping[str, _Place], path: str) -> tuple[str, str]:
+def _help(cell: UnitCell, places: Mapping[str, Place], path: str) -> tuple[str, str]:
     """What is allowed, and the nearest known paths."""
     known = sorted({_short(cell, place) for place in places.values()})
     near = difflib.get_close_matches(path, known, 3, cutoff=0.5)

@@ -15,6 +15,10 @@ if TYPE_CHECKING:
     from ..cell.unit_cell import UnitCell
 
 
+SPARED: Mapping[str, Any] = {"progress": False, "voltages_V": ()}
+"""What a row of a table does without: lines about the meshes, and points of a curve beside the key ones."""
+
+
 @dataclass(frozen=True)
 class Point:
     """What became of a point.
@@ -35,14 +39,14 @@ class Point:
 
 @dataclass(frozen=True)
 class Compute:
-    """A computation on a unit cell, with the mesh options it is given.
+    """A computation on a unit cell, with the options of mesh and accuracy it is given.
 
     Parameters
     ----------
     function : callable
-        Takes a UnitCell; or a Problem, if its first argument is called ``problem``.
+        Takes a UnitCell; or a Problem, if its first argument is called ``problem`` and it meshes no cells itself.
     mesh_options : mapping
-        ``first_step_um`` and ``growth``, where stated.
+        ``first_step_um``, ``growth`` and ``target_error_percent``, where stated.
 
     Raises
     ------
@@ -56,19 +60,22 @@ class Compute:
     def __post_init__(self) -> None:
         problems = Complaints("sweep")
         allowed = "a function of a UnitCell, or of a Problem if its first argument is called problem"
-        if problems.unless(callable(self.function), f"compute = {self.function!r}", allowed) and not self._on_mesh:
-            taken = _arguments(self.function)
+        if problems.unless(callable(self.function), f"compute = {self.function!r}", allowed):
+            taken = ["first_step_um", "growth"] if self._on_mesh else _arguments(self.function)
             for name in self.mesh_options:
                 problems.unless(name in taken, f"{name} for a compute that does not take it", "an argument of compute")
         problems.raise_if_any()
 
     @property
     def _on_mesh(self) -> bool:
-        return _arguments(self.function)[:1] == ["problem"]
+        taken = _arguments(self.function)
+        return taken[:1] == ["problem"] and "first_step_um" not in taken
 
     def __call__(self, cell: UnitCell) -> Any:
         if not self._on_mesh:
-            return self.function(cell, **self.mesh_options)
+            taken = _arguments(self.function)
+            spared = {name: value for name, value in SPARED.items() if name in taken}
+            return self.function(cell, **self.mesh_options, **spared)
         from ..transport.build import problem
 
         return self.function(problem(cell, **self.mesh_options))

@@ -5,16 +5,20 @@ from __future__ import annotations
 import inspect
 import itertools
 import sys
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..cell.unit_cell import UnitCell
 from ..errors import Complaints, SweepInterrupted
 from .columns import collected_current
+from .engine import Workers, run_plan
 from .paths import changed, check_paths, plain
+from .plan import Subject, check_storable, plan_of, plan_of_cells, subject_digest
 from .point import Compute, Point, guarded, solved
-from .workers import SpreadError, available_cores, run_spread
+from .progress import points_bar
+from .store import open_store
+from .workers import SpreadError, available_cores, check_processes, run_spread
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -31,7 +35,10 @@ def sweep(
     processes: int | None = None,
     first_step_um: float | None = None,
     growth: float | None = None,
+    target_error_percent: float | None = None,
     progress: bool = True,
+    store: str | Path | None = None,
+    scheduler: str | None = None,
 ) -> pd.DataFrame:
     """Compute a cell for many values of its inputs.
 
@@ -54,8 +61,17 @@ def sweep(
         Default is one per core.
     first_step_um, growth : float, optional
         Of the mesh; as for `problem`.
+    target_error_percent : float, optional
+        Error bars to reach, as for `current_voltage`; `collected_current`, `solve_excess`, `solve_bipolar` and
+        `current_voltage` reach 0.1 % by default and fill the columns ``error_bar_…``.
     progress : bool
         Show a progress bar on a terminal.
+    store : str or Path, optional
+        SQLite file on a local disk that keeps every point as soon as it is finished. The same sweep over the same store
+        goes on where an earlier one ended; points that need not be computed again are recognised by all of their
+        inputs, the versions, and (for a `compute` of your own) its text, but not by what that calls.
+    scheduler : str, optional
+        Address of a Dask scheduler whose workers compute, e.g. ``"tcp://192.168.0.7:8786"``; needs a store.
 
     Returns
     -------
@@ -66,18 +82,23 @@ def sweep(
     Raises
     ------
     InputError
-        Unknown paths or arguments, no values, or lists of different lengths that are paired.
+        Unknown paths or arguments, no values, lists of different lengths that are paired, or (with a store) an input
+        that cannot be recognised again, such as a lambda.
+    StoreError
+        The store is in use, or its disk is full; finished points are kept.
     SweepInterrupted
         Ctrl-C; holds the finished rows.
     """
     function = _as_function(cell_or_function, variables)
     points = _points(variables, paired)
-    _check_processes(processes)
-    options = {"first_step_um": first_step_um, "growth": growth}
+    check_processes("sweep", processes)
+    options = {"first_step_um": first_step_um, "growth": growth, "target_error_percent": target_error_percent}
     run = Compute(compute, {name: value for name, value in options.items() if value is not None})
+    if store is not None or scheduler is not None:
+        return _stored(cell_or_function, function, points, run, store, Workers(processes, scheduler), progress)
     rows: dict[int, Point] = {}
     try:
-        with _bar(len(points), progress) as advance:
+        with points_bar(len(points), progress) as advance:
             _run(function, points, run, processes, rows, advance)
     except KeyboardInterrupt:
         interrupted = SweepInterrupted(_table(points, rows), len(points))
@@ -115,6 +136,31 @@ def _run(
             advance(f"sweep runs in one process: {reason}")
     for index, cell in jobs:
         done(index, solved(compute, cell))
+
+
+def _stored(
+    source: Any, function: Callable[..., UnitCell], points: list[Values], compute: Compute, path: Any,
+    workers: Workers, progress: bool,
+) -> pd.DataFrame:  # fmt: skip
+    """The same through a store. Cells that a function makes are made here, and recognised as a whole."""
+    problems = Complaints("sweep")
+    problems.unless(path is not None, "scheduler without store", "a file for the results", 'store="results.sqlite"')
+    problems.raise_if_any()
+    names, values = tuple(points[0]), [tuple(point.values()) for point in points]
+    check_storable(names, values)
+    if isinstance(source, UnitCell):
+        subject = Subject(compute, source)
+        plan = plan_of(names, values, subject_digest(subject, names))
+    else:
+        subject = Subject(compute)
+        plan = plan_of_cells(names, values, [guarded(_built, function, point) for point in points], subject)
+    with open_store(path) as store:
+        try:
+            run_plan(plan, subject, store, workers, progress=progress)
+        except SweepInterrupted as interrupted:
+            print(interrupted, file=sys.stderr)
+            raise
+        return store.table()
 
 
 def _built(function: Callable[..., UnitCell], values: Values) -> UnitCell:
@@ -170,13 +216,6 @@ def _points(variables: Mapping[str, Sequence[Any]], paired: bool) -> list[Values
     return [dict(zip(variables, values, strict=True)) for values in combined]
 
 
-def _check_processes(processes: Any) -> None:
-    problems = Complaints("sweep")
-    good = processes is None or (isinstance(processes, int) and processes >= 1)
-    problems.unless(good, f"processes = {processes!r}", "a whole number of at least 1, or None for all cores")
-    problems.raise_if_any()
-
-
 def _table(points: list[Values], rows: Mapping[int, Point]) -> pd.DataFrame:
     """Finished points as a table."""
     import pandas as pd
@@ -188,22 +227,3 @@ def _table(points: list[Values], rows: Mapping[int, Point]) -> pd.DataFrame:
     results = {name: [rows[i].results.get(name, float("nan")) for i in done] for name in names}
     texts = {what: [getattr(rows[i], what) for i in done] for what in ("failure", "note")}
     return pd.concat([table, pd.DataFrame(results | texts)], axis=1)
-
-
-@contextmanager
-def _bar(total: int, progress: bool) -> Iterator[Callable[[str], None]]:
-    """A function that advances a bar on the error stream by a point, or prints a message there."""
-    from rich.console import Console
-    from rich.progress import Progress
-
-    console = Console(stderr=True)
-    with Progress(console=console, transient=True, disable=not (progress and console.is_terminal)) as bar:
-        task = bar.add_task("sweep", total=total)
-
-        def advance(message: str) -> None:
-            if message and progress:
-                console.print(message, style="yellow", highlight=False)
-            elif not message:
-                bar.advance(task)
-
-        yield advance
