@@ -28,9 +28,11 @@ UNIT_TEXTS = {
     "um": "µm", "nm": "nm", "mm": "mm", "cm": "cm", "cm2": "cm²",
     "s": "s", "ms": "ms", "us": "µs", "per_s": "s⁻¹",
     "V": "V", "mV": "mV", "A": "A", "mA": "mA", "K": "K", "percent": "%", "ohm": "Ω",
+    "mW": "mW", "mg": "mg", "mW_per_mg": "mW/mg",
     "per_cm": "cm⁻¹", "per_cm3": "cm⁻³", "per_cm3_s": "cm⁻³ s⁻¹", "per_cm2_s": "cm⁻² s⁻¹",
     "cm_per_s": "cm/s", "cm2_per_s": "cm²/s", "cm2_per_Vs": "cm²/(V s)", "cm3_per_s": "cm³/s", "V_per_cm": "V/cm",
     "mA_per_cm2": "mA/cm²", "A_per_cm2": "A/cm²", "nA_per_cm2": "nA/cm²", "fA_per_cm2": "fA/cm²",
+    "nA_per_cm": "nA/cm",
     "mW_per_cm2": "mW/cm²", "W_per_cm2": "W/cm²",
     "ohm_cm": "Ω cm", "ohm_cm2": "Ω cm²", "mohm_cm2": "mΩ cm²", "ohm_per_sq": "Ω/sq", "ohm_per_cm": "Ω/cm",
 }  # fmt: skip

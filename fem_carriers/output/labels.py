@@ -10,6 +10,7 @@ WORDS = {
     "voc": "open-circuit voltage",
     "srv": "surface recombination velocity",
     "lost bulk": "bulk",
+    "contact contact": "contact",
 }
 """Words that are printed otherwise; whole words only."""
 

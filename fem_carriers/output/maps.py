@@ -53,8 +53,8 @@ def plot_map(
     figure, axes = _figure(1, (max(5.0, 2.2 + 0.75 * columns), max(2.8, 1.4 + 0.55 * rows)))
     ax = axes[0]
     image = ax.imshow(numbers, origin="lower", aspect="auto", cmap="viridis")
-    ax.set_xticks(range(columns), [f"{v:g}" for v in grid.columns])
-    ax.set_yticks(range(rows), [f"{v:g}" for v in grid.index])
+    ax.set_xticks(range(columns), [f"{v:.4g}" for v in grid.columns])
+    ax.set_yticks(range(rows), [f"{v:.4g}" for v in grid.index])
     ax.set_xlabel(label(x))
     ax.set_ylabel(label(y))
     ax.grid(visible=False)

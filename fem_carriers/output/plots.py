@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from ..analysis.accuracy import with_bar
 from ..errors import Complaints
 from ..files.atomic import target, write_atomically
 from ..studies.best import best_point
@@ -68,12 +69,12 @@ def plot_sweep(
     _check_columns("plot_sweep", table, [x] if y is None else [x, y])
     table = table.sort_values(x)
     at = table[x].to_numpy(dtype=float)
-    value, axis_label, unit = _judged(table, y)
+    value, bars, axis_label, unit = _judged(table, y)
     good = np.isfinite(value) & np.isfinite(at)
     _need("plot_sweep", bool(good.any()), "a table without a single finite result", "one or more results")
     losses = _loss_columns(table)
     figure, axes = _figure(2 if losses else 1, (7.2, 6.6 if losses else 3.9), ratios=(1.0, 1.15)[: 2 if losses else 1])
-    _draw_best(axes[0], at[good], value[good], (split_name(x)[1], unit))
+    _draw_best(axes[0], at[good], value[good], bars[good], (split_name(x)[1], unit))
     if (~good).any():
         lower_edge = axes[0].get_xaxis_transform()
         axes[0].plot(at[~good], np.zeros((~good).sum()), "x", color=DARK, transform=lower_edge, clip_on=False,
@@ -88,17 +89,21 @@ def plot_sweep(
     return _finish(figure, picture)
 
 
-def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], str, str]:
-    """Values, axis label and unit of what the sweep is judged by."""
+def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], NDArray[np.float64], str, str]:
+    """Values, error bars (NaN where unknown), axis label and unit of what the sweep is judged by."""
+    none = table.iloc[:, 0].map(lambda _: np.nan)
     if y is None and "efficiency_percent" in table:
         y = "efficiency_percent"
     if y is not None:
-        return table[y].to_numpy(dtype=float), label(y), split_name(y)[1]
+        bars = table.get(f"error_bar_{y}", none)
+        return table[y].to_numpy(dtype=float), bars.to_numpy(dtype=float), label(y), split_name(y)[1]
     collected = [c for c in table if str(c).startswith("collected_") and str(c).endswith(CURRENT)]
     known = ", ".join(map(str, table.columns))
     _need("plot_sweep", bool(collected), f"columns {known}", "collected_…_mA_per_cm2, or y= a column to judge by")
     total = table[collected].to_numpy(dtype=float).sum(axis=1)
-    return total, label(str(collected[0])) if len(collected) == 1 else "collected (mA/cm²)", "mA/cm²"
+    all_bars = [table.get(f"error_bar_{c}", none).to_numpy(dtype=float) for c in collected]
+    text = label(str(collected[0])) if len(collected) == 1 else "collected (mA/cm²)"
+    return total, np.sum(all_bars, axis=0), text, "mA/cm²"
 
 
 def _loss_columns(table: pd.DataFrame) -> list[str]:
@@ -113,15 +118,19 @@ def _loss_columns(table: pd.DataFrame) -> list[str]:
     return [c for c in columns if float(table[c].max()) > 1e-6 * top]
 
 
-def _draw_best(ax: Axes, x: NDArray[np.float64], y: NDArray[np.float64], units: tuple[str, str]) -> None:
-    """The curve, its best point and flat range as `best_point` finds them."""
+def _draw_best(
+    ax: Axes, x: NDArray[np.float64], y: NDArray[np.float64], bars: NDArray[np.float64], units: tuple[str, str]
+) -> None:
+    """The curve with its error bars, its best point and flat range as `best_point` finds them."""
     import pandas as pd
 
-    best = best_point(pd.DataFrame({"x": x, "y": y}).drop_duplicates("x"), "x", "y")
+    best = best_point(pd.DataFrame({"x": x, "y": y, "error_bar_y": bars}).drop_duplicates("x"), "x", "y")
     text = f"within {best.within_percent:g} %:\n{best.flat_from:.4g} to {best.flat_to:.4g} {units[0]}"
     ax.axvspan(best.flat_from, best.flat_to, color=OKABE_ITO[4], alpha=0.22, linewidth=0, label=text)
-    ax.plot(x, y, "-o", color=OKABE_ITO[0], markersize=4)
-    text = f"best: {best.value:.4g} {units[1]}\nat {best.location:.4g} {units[0]}"
+    known = np.where(np.isfinite(bars), bars, 0.0)
+    ax.errorbar(x, y, yerr=known, fmt="-o", color=OKABE_ITO[0], markersize=4, elinewidth=1.2, capsize=2)
+    value, place = with_bar(best.value, best.value_bar, 4), with_bar(best.location, best.location_bar, 4)
+    text = f"best: {value} {units[1]}\nat {place} {units[0]}"
     ax.plot(best.location, best.value, "D", color=OKABE_ITO[5], markersize=8, label=text)
     ax.margins(y=0.12)
 
@@ -249,8 +258,10 @@ def _check_columns(what: str, table: pd.DataFrame, names: list[str]) -> None:
     problems.raise_if_any()
 
 
-def _figure(rows: int, size: tuple[float, float], ratios: tuple[float, ...] | None = None) -> tuple[Figure, list[Axes]]:
-    """A figure with its own canvas, so that nothing is registered globally."""
+def _figure(
+    rows: int, size: tuple[float, float], ratios: tuple[float, ...] | None = None, shared: bool = True
+) -> tuple[Figure, list[Axes]]:
+    """A figure with its own canvas, so that nothing is registered globally; axes below each other, x shared or not."""
     import matplotlib
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
@@ -258,7 +269,7 @@ def _figure(rows: int, size: tuple[float, float], ratios: tuple[float, ...] | No
     with matplotlib.rc_context(_LOOK):
         figure = Figure(figsize=size, layout="constrained")
         FigureCanvasAgg(figure)
-        axes = figure.subplots(rows, 1, sharex=True, squeeze=False, height_ratios=ratios)
+        axes = figure.subplots(rows, 1, sharex=shared, squeeze=False, height_ratios=ratios)
     return figure, list(axes[:, 0])
 
 

@@ -16,6 +16,7 @@ from .images import Image
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from ..analysis.collection import CollectionProbability
     from ..analysis.solution import Solution
 
 FLUX = "carrier_flux_mA_per_cm2"
@@ -74,12 +75,12 @@ class Scene:
 
     Parameters
     ----------
-    solution : Solution
+    solution : Solution or CollectionProbability
     stretch_z : float
         Factor by which depth is drawn larger.
     """
 
-    def __init__(self, solution: Solution, stretch_z: float = 1.0) -> None:
+    def __init__(self, solution: Solution | CollectionProbability, stretch_z: float = 1.0) -> None:
         self.solution, self.stretch_z = solution, stretch_z
         self.problem = solution.problem
         cell = cell_fields(solution)

@@ -15,11 +15,14 @@ import numpy as np
 
 from ..errors import Complaints
 from ..files.atomic import target, write_atomically
+from ..grid.grid_solution import GridSolution
 from .drawing import Drawing
 from .images import images, most_copies
+from .plan_window import view_plan
 from .scene import Scene
 
 if TYPE_CHECKING:
+    from ..analysis.collection import CollectionProbability
     from ..analysis.solution import Solution
 
 HELP = "n / b  field    l  log scale    m  copies    o  outlines and names    s  save picture    q  close"
@@ -30,7 +33,7 @@ PICTURES = (".png", ".jpg", ".tif")
 
 
 def view(
-    solution: Solution,
+    solution: Solution | CollectionProbability | GridSolution,
     field: str | None = None,
     *,
     picture: str | Path | None = None,
@@ -52,10 +55,13 @@ def view(
 
     Parameters
     ----------
-    solution : Solution
+    solution : Solution, CollectionProbability or GridSolution
+        A cell with its grid is shown in plan, in mm, with its metal to scale; ``copies`` to ``stretch_z`` are then
+        without meaning, and the key ``g`` takes the metal away, a click tells the value.
     field : str, optional
         One of `nodal_fields`, ``diffusion_length_um`` or ``carrier_flux_mA_per_cm2`` (its magnitude); default is the
-        excess density.
+        excess density, or the collection probability of what `collection_probability` returns. Of a GridSolution
+        ``above_terminal_mV`` or ``current_mA_per_cm2``.
     picture : str or Path, optional
         Draw off screen and save here (.png, .jpg or .tif) instead of opening a window. Without a display a picture
         named after the field is saved in the current folder.
@@ -83,8 +89,10 @@ def view(
     InputError
         Unknown field, copies that do not exist, or a picture that cannot be written.
     """
+    if isinstance(solution, GridSolution):
+        return _view_plan(solution, field, picture, size)
     scene = Scene(solution, stretch_z)
-    field = "excess_density_per_cm3" if field is None else field
+    field = solution.main_field if field is None else field
     _check(scene, field, stretch_z, size)
     shown = images(scene.problem, copies)
     if picture is None and not has_display():
@@ -94,6 +102,20 @@ def view(
     clip = path is None if clip is None else clip
     with nullcontext() if has_display() else _no_display_warnings():
         return _drawn(scene, field, path, shown, copies=copies, log=log, clip=clip, arrows=arrows, size=size)
+
+
+def _view_plan(solution: GridSolution, field: str | None, picture: Any, size: tuple[int, int]) -> Path | None:
+    if picture is None and not has_display():
+        picture = Path("plan.png")
+        warnings.warn(f"no display, so the picture is saved as {picture.resolve()}", UserWarning, stacklevel=3)
+    path = None if picture is None else target("picture", picture, PICTURES)
+    with nullcontext() if has_display() else _no_display_warnings():
+        plotter = _plotter(path is not None, size)
+        try:
+            view_plan(solution, plotter, field, path, size)
+        finally:
+            plotter.close()
+    return path
 
 
 def _drawn(
