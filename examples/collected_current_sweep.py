@@ -18,7 +18,7 @@ import numpy as np
 import fem_carriers as fc
 
 COLLECTED = "collected_front_mA_per_cm2"
-FINGER_UM, STRIP_UM = 25, 60
+FINGER_UM, STRIP_UM, PITCHES_UM = 25, 60, np.geomspace(80, 1500, 14).round()
 
 wafer = fc.Base("p", doping_per_cm3=1.5e16, thickness_um=140, lifetime_us=300)
 emitter = fc.DopedLayer("n", sheet_resistance_ohm_per_sq=90)
@@ -41,37 +41,37 @@ def losses(table):
     short["Auger+rad."] = short["base_Auger"] + short["base_radiative"]
     names = {"pitch_um": "pitch (µm)", "collected_front": "collected", "base_lifetime": "lost: defects"}
     wanted = ["pitch_um", "shaded %", "generated", "collected_front", "base_lifetime", "Auger+rad.", "front", "rear"]
+    short["collected_front"] = fc.with_bars(table, {COLLECTED: "text"})["text"]
     return short[[*wanted, "rear_metal"]].rename(columns=names)
 
 
-def main():
+def main(pitches_um=PITCHES_UM):
     results = Path("results")
     results.mkdir(exist_ok=True)
-    table = fc.sweep(cell, {"pitch_um": np.geomspace(80, 1500, 14).round()})
-    print(f"Currents in mA/cm² of cell area; fingers {FINGER_UM} µm wide on n-type strips of {STRIP_UM} µm")
+    table = fc.sweep(cell, {"pitch_um": pitches_um})
+    print(f"Currents in mA/cm² of cell area; fingers of {FINGER_UM} µm on n-type strips of {STRIP_UM} µm")
     print(losses(table).to_string(index=False, float_format="{:.2f}".format))
     strained = table[table["note"].str.contains("majority density")]
     if len(strained):
         print(
-            f"Note on {len(strained)} of {len(table)} points: the excess density reaches up to "
-            f"{100 * strained['injection_ratio'].max():.0f} % of the doping.\nThis form is meant for low injection: it "
-            "leaves out the field of the majority current, and sheet resistance. See the last line."
+            f"On {len(strained)} points the excess density reaches up to {100 * table['injection_ratio'].max():.0f} % "
+            "of the doping.\nIt is for low injection: it leaves out the majority current's field. See the last line."
         )
     best = fc.best_point(table, "pitch_um", COLLECTED)
     print(best)
-    problem = fc.problem(fc.changed(cell, {"pitch_um": best.location}))
+    at_best = fc.changed(cell, {"pitch_um": best.location})
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", fc.ModelWarning)  # said above
-        solution = fc.solve_excess(problem)
-    full = fc.solve_bipolar(problem)
+        solution = fc.solve_excess(at_best)
+    full = fc.solve_bipolar(at_best, target_error={"current_front_mA_per_cm2": 0.01})
     fc.write_table(table, results / "collected_current_sweep.csv")
     fc.plot_sweep(table, "pitch_um", picture=results / "collected_current_sweep.png")
     fc.write_fields(solution, results / "collected_current_sweep.vtu")
     fc.view(solution, picture=results / "collected_current_sweep_excess_density.png")
     found, checked = (s.collected_mA_per_cm2["front"] for s in (solution, full))
-    print(
-        f"At that pitch {found:.2f} mA/cm² are collected; {checked:.2f} in the full form (both carriers, layers, field)"
-    )
+    bars = solution.uncertainty[COLLECTED], full.uncertainty["current_front_mA_per_cm2"]
+    text = f"At that pitch {fc.with_bar(found, bars[0])} mA/cm² are collected; {fc.with_bar(checked, bars[1])}"
+    print(text, "in the full form (both carriers, layers, field)")
     return best, table, found, checked
 
 

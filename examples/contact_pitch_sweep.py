@@ -28,18 +28,16 @@ light = fc.Light.sunlight(reflectance=0.02, path="lambertian")
 cell = fc.UnitCell(wafer, pitch_um=1200, front=front, rear=rear, light=light)
 
 PITCHES_UM = np.geomspace(500, 3000, 14).round(-1)
-MESH = {"first_step_um": 2, "growth": 3}  # coarse: the efficiency is within 0.001 % absolute of the default mesh's
 LOST = {"shading": "shaded", "bulk": "lost_base", "surfaces": ("lost_front", "lost_rear"), "layers": "lost_layer",
         "base transport": ("lost_electrons", "lost_holes"), "contacts": "lost_contact"}  # fmt: skip
 WORDS = {"bulk": "recombination in the", "surface": "recombination at", "transport": "transport of",
          "sheet": "transport in the", "contact": "resistance of"}  # fmt: skip
-HEADLINES = {"pitch_um": "pitch (µm)", "jsc_mA_per_cm2": "Jsc (mA/cm²)", "voc_V": "Voc (V)",
-             "fill_factor_percent": "FF (%)", "efficiency_percent": "eff. (%)"}  # fmt: skip
+HEADLINES = {"pitch_um": "pitch (µm)", "voc_V": "Voc (V)", "efficiency_percent": "efficiency (%)"}
 
 
 def grouped(table):
-    """Headline numbers and losses of a few kinds, mW/cm²."""
-    short = table[list(HEADLINES)].rename(columns=HEADLINES)
+    """Headline numbers with error bars, and losses of a few kinds, mW/cm²."""
+    short = fc.with_bars(table, HEADLINES)
     for kind, beginning in LOST.items():
         short[kind] = table[[c for c in table if c.startswith(beginning) and c.endswith("mW_per_cm2")]].sum(axis=1)
     return short
@@ -52,18 +50,18 @@ def limits(losses):
     return "; ".join(f"{name} {parts[name]:.2f}" for name in sorted(parts, key=parts.get, reverse=True)[:3])
 
 
-def main():
+def main(pitches_um=PITCHES_UM):
     results = Path("results")
     results.mkdir(exist_ok=True)
-    table = fc.sweep(cell, {"pitch_um": PITCHES_UM}, compute=fc.current_voltage, **MESH)
+    table = fc.sweep(cell, {"pitch_um": pitches_um}, compute=fc.current_voltage)
     print("Losses at maximum power in mW/cm²; those of light that is reflected or escapes are left out")
-    print(grouped(table).to_string(index=False, formatters={"Voc (V)": "{:.4f}".format}, float_format="{:.2f}".format))
+    print(grouped(table).to_string(index=False, float_format="{:.2f}".format))
     best = fc.best_point(table, "pitch_um", "efficiency_percent")
     print(best)
-    curve = fc.current_voltage(fc.problem(fc.changed(cell, {"pitch_um": best.location})))
+    curve = fc.current_voltage(fc.changed(cell, {"pitch_um": best.location}))
     solution = curve.maximum_power.solution
     print(f"Limited there by (mW/cm²): {limits(solution.losses)}")
-    print(f"On the default, finer mesh: {curve.efficiency_percent:.3f} % at that pitch")
+    print(f"At that pitch, ± what the mesh may cost:\n{curve}")
     fc.write_table(table, results / "contact_pitch_sweep.csv")
     fc.plot_sweep(table, "pitch_um", picture=results / "contact_pitch_sweep.png")
     fc.plot_curve(curve, picture=results / "contact_pitch_sweep_curve.png")

@@ -15,7 +15,7 @@ from pathlib import Path
 
 import fem_carriers as fc
 
-DOT_UM, FIRST_STEP_UM = 90.0, 4.0
+DOT_UM, TARGET_PERCENT = 90.0, 0.5
 PITCHES_UM = (180.0, 220.0, 260.0, 300.0, 350.0, 420.0, 500.0)
 
 wafer = fc.Base("p", doping_per_cm3=1.5e16, thickness_um=140, lifetime_us=300)
@@ -36,23 +36,24 @@ def square_grid(pitch_um):
     )
 
 
-def main(pitches_um=PITCHES_UM, first_step_um=FIRST_STEP_UM):
+def main(pitches_um=PITCHES_UM, target_error_percent=TARGET_PERCENT):
     results = Path("results")
     results.mkdir(exist_ok=True)
-    table = fc.sweep(square_grid, {"pitch_um": pitches_um}, first_step_um=first_step_um)
+    table = fc.sweep(square_grid, {"pitch_um": pitches_um}, target_error_percent=target_error_percent)
     columns = {"pitch_um": "pitch (µm)", "shaded_mA_per_cm2": "shaded", "generated_mA_per_cm2": "generated",
                "collected_front_mA_per_cm2": "collected", "unknowns": "unknowns"}  # fmt: skip
     print("Currents in mA/cm² of cell area")
-    print(table[list(columns)].rename(columns=columns).to_string(index=False, float_format="{:.2f}".format))
+    print(fc.with_bars(table, columns).to_string(index=False, float_format="{:.2f}".format))
     best = fc.best_point(table, "pitch_um", "collected_front_mA_per_cm2")
     print(best)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", fc.ModelWarning)
-        at_best = fc.problem(square_grid(best.location), first_step_um=first_step_um)
-        solution = fc.solve_excess(at_best)
+        at_best = square_grid(best.location)
+        solution = fc.solve_excess(at_best, target_error_percent=target_error_percent)
+    name = "collected_front_mA_per_cm2"
     print(
-        f"At that pitch: {solution.collected_mA_per_cm2['front']:.2f} mA/cm². The excess density reaches "
-        f"{100 * solution.injection_ratio:.1f} % of the doping; this form is meant for low injection."
+        f"At that pitch: {fc.with_bar(solution.headline[name], solution.uncertainty[name])} mA/cm². The excess density "
+        f"reaches {100 * solution.injection_ratio:.1f} % of the doping; this form is meant for low injection."
     )
     fc.write_table(table, results / "dots_3d.csv")
     fc.plot_sweep(table, "pitch_um", picture=results / "dots_3d.png")

@@ -29,11 +29,13 @@ def main():
         sides={"x_min": sink, "x_max": sink},
         light=fc.Light.uniform(RATE_PER_CM3_S, mask=fc.HalfPlane(WIDTH_UM / 2)),
     )
-    solution = fc.solve_excess(fc.problem(cell))
+    solution = fc.solve_excess(cell)
     line = solution.along_line((0, 25), (WIDTH_UM, 25), points=201)
     lit, dark = (solution.ledger.share(end) for end in ("x_min", "x_max"))
     top = line.loc[line["excess_density_per_cm3"].idxmax()]
     print(f"lit end {lit:.9f}, dark end {dark:.9f} of the generated carriers")
+    (mean,), (bar,) = solution.headline.values(), solution.uncertainty.values()
+    print(f"mean density {fc.with_bar(mean, bar)} /cm³")
     print(f"highest density {top['excess_density_per_cm3']:.4e} /cm³ at x = {top['x_um']:g} µm")
     fc.plot_line(line, log=False, picture=results / "half_lit_slab.png")
     return lit, dark, top

@@ -17,7 +17,9 @@ import fem_carriers as fc
 PITCH_UM, GAP_SHARE, THICKNESS_UM = 1500, 0.04, 150
 FRACTIONS = (0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.88)
 SHOWN = (0.4, 0.6, 0.8)
-MESH = {"first_step_um": 2, "growth": 3}
+HEADLINES = {"emitter_fraction": "emitter fraction", "jsc_mA_per_cm2": "Jsc (mA/cm²)", "voc_V": "Voc (V)",
+             "fill_factor_percent": "FF (%)", "efficiency_percent": "efficiency (%)",
+             "above_base_percent": "collected above base (%)"}  # fmt: skip
 wafer = fc.Base("n", resistivity_ohm_cm=4, thickness_um=THICKNESS_UM, lifetime_us=1200)
 plus, minus = fc.Contact("plus", contact_resistivity_mohm_cm2=1), fc.Contact("minus", contact_resistivity_mohm_cm2=1)
 
@@ -44,22 +46,20 @@ def collected_above_base(emitter_fraction):
     """Share of the holes generated above the n-type strip that arrive at the emitter, at short circuit."""
     base_starts_um = (emitter_fraction + GAP_SHARE) * PITCH_UM / 2
     cell = interdigitated(emitter_fraction, lit=fc.LitRectangle((base_starts_um, PITCH_UM / 2)))
-    return fc.solve_bipolar(fc.problem(cell, **MESH)).ledger.share("plus")
+    return fc.solve_bipolar(cell).ledger.share("plus")
 
 
 def main(fractions=FRACTIONS):
     results = Path("results")
     results.mkdir(exist_ok=True)
-    table = fc.sweep(interdigitated, {"emitter_fraction": fractions}, compute=fc.current_voltage, **MESH)
-    shown = table[["emitter_fraction", "jsc_mA_per_cm2", "voc_V", "fill_factor_percent", "efficiency_percent"]].copy()
-    shown["above_base_percent"] = [100 * collected_above_base(f) for f in fractions]
-    names = ["emitter fraction", "Jsc (mA/cm²)", "Voc (V)", "FF (%)", "efficiency (%)", "collected above base (%)"]
-    print(shown.set_axis(names, axis=1).to_string(index=False, float_format="{:.3f}".format))
+    table = fc.sweep(interdigitated, {"emitter_fraction": fractions}, compute=fc.current_voltage)
+    table["above_base_percent"] = [100 * collected_above_base(f) for f in fractions]
+    print(fc.with_bars(table, HEADLINES).to_string(index=False, float_format="{:.3f}".format))
     best = fc.best_point(table, "emitter_fraction", "efficiency_percent")
     print(best)
     line = {}
     for fraction in SHOWN:
-        solution = fc.solve_bipolar(fc.problem(interdigitated(fraction), **MESH))
+        solution = fc.solve_bipolar(interdigitated(fraction))
         along = solution.along_line((0, THICKNESS_UM - 5), (PITCH_UM / 2, THICKNESS_UM - 5), points=151)
         line["distance_um"] = along["distance_um"]
         line[f"emitter_{100 * fraction:g}_percent_per_cm3"] = along["excess_density_per_cm3"]
@@ -69,7 +69,7 @@ def main(fractions=FRACTIONS):
     collected = table[["emitter_fraction", "jsc_mA_per_cm2"]]
     fc.plot_sweep(collected, "emitter_fraction", y="jsc_mA_per_cm2", picture=results / "interdigitated_rear_jsc.png")
     fc.view(solution, picture=results / "interdigitated_rear_excess_density.png", arrows=True, stretch_z=2)
-    return shown, best, pd.DataFrame(line)
+    return table, best, pd.DataFrame(line)
 
 
 if __name__ == "__main__":

@@ -22,7 +22,6 @@ light = fc.Light.sunlight(reflectance=0.03, path="lambertian")
 cell = fc.UnitCell(wafer, pitch_um=1000, front=front, rear=rear, light=light)
 
 WIDTHS_UM, PITCHES_UM = (15, 20, 30, 40), (500, 700, 900, 1200, 1500, 2000)
-MESH = {"first_step_um": 2, "growth": 3}
 WIDTH = "front.finger.width_um"
 COMMON_METAL = {"front.finger.J0_fA_per_cm2": 900, "rear.finger.J0_fA_per_cm2": 500}
 
@@ -30,9 +29,10 @@ COMMON_METAL = {"front.finger.J0_fA_per_cm2": 900, "rear.finger.J0_fA_per_cm2": 
 def main(widths_um=WIDTHS_UM, pitches_um=PITCHES_UM):
     results = Path("results")
     results.mkdir(exist_ok=True)
-    table = fc.sweep(cell, {WIDTH: widths_um, "pitch_um": pitches_um}, compute=fc.current_voltage, **MESH)
+    table = fc.sweep(cell, {WIDTH: widths_um, "pitch_um": pitches_um}, compute=fc.current_voltage)
     print("Efficiency (%) by finger width (µm, down) and pitch (µm, across)")
-    print(table.pivot(index=WIDTH, columns="pitch_um", values="efficiency_percent").round(2).to_string())
+    shown = table.assign(text=fc.with_bars(table, {"efficiency_percent": "text"})["text"])
+    print(shown.pivot(index=WIDTH, columns="pitch_um", values="text").to_string())
     best = {}
     for width, rows in table.groupby(WIDTH):
         best[width] = fc.best_point(rows, "pitch_um", "efficiency_percent")
@@ -40,13 +40,11 @@ def main(widths_um=WIDTHS_UM, pitches_um=PITCHES_UM):
     width = min(best)
     at_best = fc.changed(cell, {WIDTH: width, "pitch_um": best[width].location})
     common = fc.changed(at_best, COMMON_METAL)
-    curves = [fc.current_voltage(fc.problem(c, **MESH)) for c in (at_best, common)]
+    curves = [fc.current_voltage(c) for c in (at_best, common)]
     gain = curves[0].efficiency_percent - curves[1].efficiency_percent
-    print(
-        f"At {width:g} µm and {best[width].location:.0f} µm: {curves[0].efficiency_percent:.2f} % and "
-        f"{1e3 * curves[0].voc_V:.1f} mV; with J0 of 900 and 500 fA/cm² under the metal {gain:.2f} % and "
-        f"{1e3 * (curves[0].voc_V - curves[1].voc_V):.1f} mV less"
-    )
+    print(f"At {width:g} µm and {best[width].location:.0f} µm, ± what the mesh may cost:\n{curves[0]}")
+    lower_mV = 1e3 * (curves[0].voc_V - curves[1].voc_V)
+    print(f"With J0 of 900 and 500 fA/cm² under the metal {gain:.2f} % and {lower_mV:.1f} mV less")
     fc.write_table(table, results / "passivated_contacts.csv")
     fc.plot_map(table, "pitch_um", WIDTH, picture=results / "passivated_contacts.png")
     fc.plot_losses(curves[0].maximum_power.solution.losses, picture=results / "passivated_contacts_losses.png")

@@ -22,7 +22,7 @@ from pathlib import Path
 import fem_carriers as fc
 
 PITCHES_UM, DIAMETERS_UM = (130, 200, 300, 450), (30, 45, 70)
-MESH = {"first_step_um": 15, "growth": 3}  # coarse: 0.002 % absolute of efficiency above 6 µm and 2.5
+TARGET = {"target_error_percent": 0.5}
 RESISTIVITY_OHM_CM, THICKNESS_UM = 1.5, 150
 wafer = fc.Base("p", resistivity_ohm_cm=RESISTIVITY_OHM_CM, thickness_um=THICKNESS_UM, lifetime_us=500)
 emitter = fc.DopedLayer("n", sheet_resistance_ohm_per_sq=120)
@@ -48,21 +48,21 @@ def main(pitches_um=PITCHES_UM, diameters_um=DIAMETERS_UM):
     results = Path("results")
     results.mkdir(exist_ok=True)
     variables = {"pitch_um": pitches_um, "diameter_um": diameters_um}
-    table = fc.sweep(dotted, variables, compute=fc.current_voltage, **MESH)
+    table = fc.sweep(dotted, variables, compute=fc.current_voltage, **TARGET)
     current = table["maximum_power_mW_per_cm2"] / table["maximum_power_voltage_V"]
     table["base_ohm_cm2"] = 1e3 * table["lost_holes_in_the_base_mW_per_cm2"] / current**2
     table["formula_ohm_cm2"] = [formula_ohm_cm2(p, d) for p, d in zip(table.pitch_um, table.diameter_um, strict=True)]
     columns = {"pitch_um": "pitch (µm)", "diameter_um": "diameter (µm)", "voc_V": "Voc (V)",
                "fill_factor_percent": "FF (%)", "efficiency_percent": "efficiency (%)",
                "base_ohm_cm2": "base (Ω·cm²)", "formula_ohm_cm2": "formula (Ω·cm²)"}  # fmt: skip
-    print(table[list(columns)].rename(columns=columns).to_string(index=False, float_format="{:.3f}".format))
+    print(fc.with_bars(table, columns).to_string(index=False, float_format="{:.3f}".format))
     for diameter, rows in table.groupby("diameter_um"):
         print(f"dots of {diameter:g} µm: {fc.best_point(rows, 'pitch_um', 'efficiency_percent')}")
     best = table.loc[table["efficiency_percent"].idxmax()]
     pitch, diameter, voltage = (float(best[c]) for c in ("pitch_um", "diameter_um", "maximum_power_voltage_V"))
     fc.write_table(table, results / "rear_point_contacts.csv")
     fc.plot_map(table, "pitch_um", "diameter_um", picture=results / "rear_point_contacts.png")
-    solution = fc.solve_bipolar(fc.problem(dotted(pitch, diameter), **MESH), voltage)
+    solution = fc.solve_bipolar(dotted(pitch, diameter), voltage, **TARGET)
     fc.write_fields(solution, results / "rear_point_contacts.vtu")
     fc.plot_losses(solution.losses, picture=results / "rear_point_contacts_losses.png")
     picture = results / "rear_point_contacts_potential.png"

@@ -34,17 +34,18 @@ def main(sheets_ohm_per_sq=SHEETS_OHM, pitches_um=PITCHES_UM):
     results = Path("results")
     results.mkdir(exist_ok=True)
     variables = {SHEET: sheets_ohm_per_sq, "pitch_um": pitches_um}
-    table = fc.sweep(cell, variables, compute=fc.current_voltage, first_step_um=2, growth=3)
-    rows = []
+    table = fc.sweep(cell, variables, compute=fc.current_voltage)
+    rows, bar = [], 0.0
     for sheet, swept in table.groupby(SHEET):
         fixed = swept[swept["pitch_um"] == FIXED_PITCH_UM].iloc[0]
         best = fc.best_point(swept, "pitch_um", "efficiency_percent")
         rows.append((sheet, fixed["efficiency_percent"], fixed[LAYER_LOSS], best.location, best.value))
+        bar = max(bar, swept["error_bar_efficiency_percent"].max())
     names = ["R_sh (Ω/sq)", "eff. fixed (%)", "layer (mW/cm²)", "best pitch (µm)", "eff. best (%)"]
     costs = pd.DataFrame(rows, columns=names)
     for column, cost in (("eff. fixed (%)", "cost fixed (%)"), ("eff. best (%)", "cost best (%)")):
         costs[cost] = costs[column].iloc[0] - costs[column]
-    print(f"At a fixed pitch of {FIXED_PITCH_UM} µm and at the best pitch; costs in % absolute")
+    print(f"At a fixed pitch of {FIXED_PITCH_UM} µm and at the best pitch; costs in % absolute, ± {bar:.1g} % each")
     print(costs.to_string(index=False, float_format="{:.3f}".format))
     last = costs.iloc[-1]
     print(

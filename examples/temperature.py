@@ -56,11 +56,11 @@ def main():
     results = Path("results")
     results.mkdir(exist_ok=True)
     kelvin = [273.15 + c for c in CELSIUS]
-    table = fc.sweep(cell, {"base.temperature_K": kelvin}, compute=fc.current_voltage, first_step_um=2, growth=3)
+    table = fc.sweep(cell, {"base.temperature_K": kelvin}, compute=fc.current_voltage)
     units = ("Jsc (mA/cm²)", "Voc (V)", "FF (%)", "efficiency (%)")
-    shown = table[list(QUANTITIES)].set_axis(units, axis=1)
+    shown = fc.with_bars(table, dict(zip(QUANTITIES, units, strict=True)))
     shown.insert(0, "T (°C)", CELSIUS)
-    print(shown.to_string(index=False, formatters={"Voc (V)": "{:.4f}".format}, float_format="{:.2f}".format))
+    print(shown.to_string(index=False))
     coefficients = {name: relative_slope_percent_per_K(table, column) for column, name in QUANTITIES.items()}
     print("Temperature coefficients, relative to 25 °C:")
     for name, value in coefficients.items():

@@ -149,7 +149,7 @@ def test_only_stated_contacts_shade():
     "call",
     [
         lambda p: fc.problem(BASE),
-        lambda p: fc.solve_excess(cell()),
+        lambda p: fc.solve_excess(BASE),
         lambda p: fc.current_voltage(p, 0.5),
         lambda p: fc.current_voltage(p, ["a"]),
         lambda p: fc.problem(cell(), first_step_um="1"),

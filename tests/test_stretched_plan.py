@@ -14,7 +14,7 @@ from fem_carriers.cell.outlines import disc
 from fem_carriers.cell.patches import Dot, Polygon, Rectangle, Strip
 from fem_carriers.cell.surface import Contact, DopedLayer, Surface
 from fem_carriers.cell.unit_cell import UnitCell
-from fem_carriers.meshing.fineness import choose_fineness, circle_corners
+from fem_carriers.meshing.fineness import circle_corners
 from fem_carriers.meshing.islands import Dots, find_dots, fit_islands, island_positions
 from fem_carriers.meshing.stretched_plan import stretched_plan
 from fem_carriers.meshing.unit_cell_mesh import mesh_unit_cell
@@ -107,8 +107,8 @@ def test_named_surfaces_have_their_areas(meshed):
 def test_cells_fill_the_piece_and_conform(meshed):
     cell, mesh = meshed
     assert mesh.volume_cm3() == pytest.approx(cell.area_cm2 * cell.thickness_um * 1e-4, rel=1e-11)
-    a, b, c, d = (mesh.cells.p[:, corner] for corner in mesh.cells.t)
-    assert np.einsum("in,in->n", np.cross(b - a, c - a, axis=0), d - a).min() > 0
+    corners = mesh.cells.refdom.p if mesh.kind == "hexahedron" else mesh.cells.refdom.p[:, :1]
+    assert mesh.cells.mapping().detDF(corners).min() > 0  # no cell is folded
     facets = mesh.cells.facets[:, mesh.cells.boundary_facets()]
     corners = mesh.cells.p[:, facets]
     ends = [(corners[i] == end).all(axis=0) for i in range(3) for end in (corners[i].min(), corners[i].max())]
@@ -134,10 +134,9 @@ def test_same_input_same_mesh():
 
 
 def test_grid_lines_keep_their_number_around_a_dot():
-    # stretched triangles: nodes of the plan are a product of two short axes, not a length over the first step
-    mesh = mesh_unit_cell(unit_cell([Dot("d", 60, **SINK)], pitch_y=600))
-    cells = mesh.cells
-    assert cells.p.shape[1] + cells.edges.shape[1] < 100_000  # quadratic tets
+    # stretched cells: nodes of the plan are a product of two short axes, not a length over the first step
+    mesh = mesh_unit_cell(unit_cell([Dot("d", 60, **SINK)], pitch_y=600), level=-1)
+    assert 8 * mesh.cells.p.shape[1] < 100_000  # quadratic hexahedra
 
 
 def test_bending_reflects():
@@ -222,8 +221,8 @@ def test_spreading_resistance_of_a_disc(a_over_h, finer, allowed):
     h = radius / a_over_h
     size = 2 * (radius + 12 * h)
     cell = unit_cell([Dot("disc", 2 * radius, **SINK)], front=None, pitch=size, pitch_y=size, thickness=h)
-    mesh = mesh_unit_cell(cell, choose_fineness(cell, None, None).first_step_um / finer)
-    basis = skfem.Basis(mesh.cells, skfem.ElementTetP2())
+    mesh = mesh_unit_cell(cell, None, None, np.log(finer) / np.log(5) - 1)
+    basis = skfem.Basis(mesh.cells, skfem.ElementHex2())
     matrix = laplace.assemble(basis)
     disc_nodes, back = (basis.get_dofs(mesh.surfaces[name]).all() for name in ("rear.disc", "front"))
     u = np.zeros(basis.N)

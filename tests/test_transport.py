@@ -12,7 +12,7 @@ from simple_cells import BARE_METAL, box_mesh, constant_base, junction
 import fem_carriers as fc
 from fem_carriers.analysis.ledger import make_ledger
 from fem_carriers.errors import InputError, ModelWarning, SolverError
-from fem_carriers.transport.bulk import AffineBulk, StockBulk
+from fem_carriers.transport.bulk import AffineBulk, MappedBulk, StockBulk
 from fem_carriers.transport.drift import make_drift
 from fem_carriers.transport.excess import ExcessSystem
 from fem_carriers.transport.spaces import Space
@@ -111,7 +111,7 @@ def test_jacobian_with_drift(drift, kind, order):
 @pytest.mark.parametrize("kind", ["quad", "hexahedron"])
 def test_jacobian_on_bent_cells(kind):
     problem = problem_on(mesh_of(kind, bent), **LAWS["all"])
-    assert isinstance(problem.space.bulk, StockBulk)
+    assert isinstance(problem.space.bulk, MappedBulk)
     check_jacobian(ExcessSystem(problem, drift_on(problem, DRIFTS["upwinded current"])))
 
 
