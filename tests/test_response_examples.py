@@ -79,3 +79,20 @@ def test_finger_scan_fit(example, capsys):
     assert found.chi_square / found.degrees_of_freedom == pytest.approx(1, abs=4 * math.sqrt(2 / 47))
     assert isinstance(found.cell, fc.UnitCell)
     assert_written("finger_scan.csv", "finger_scan_fit.csv", "finger_scan_fit.png")
+
+
+@pytest.mark.parametrize("target", [1.0, 0.1])
+def test_error_bars_hold_the_truth(example, target):
+    """Against a mesh two levels finer than the usual one; a solution, which has its mesh, is refused."""
+    cell = example("quantum_efficiency").cell(500)
+    column = "external_quantum_efficiency_percent"
+    wavelengths = [400, 900, 1100]
+    table = fc.quantum_efficiency(cell, wavelengths, target_error_percent=target, losses=False)
+    truth = fc.quantum_efficiency(fc.problem(cell, level=2), wavelengths, losses=False)[column]
+    bars = table[f"error_bar_{column}"]
+    assert (np.abs(table[column] - truth) <= bars).all()
+    assert (bars <= target / 100 * table[column]).all()
+    assert list(table).index(f"error_bar_{column}") == 4
+    dark = fc.solve_excess(fc.problem(cell, level=-4).changed(light=None))
+    with pytest.raises(fc.InputError, match="whose mesh can be refined"):
+        fc.quantum_efficiency(dark, [900], reflectance=0.0, target_error_percent=1)
