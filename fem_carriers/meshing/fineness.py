@@ -111,7 +111,7 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
         first_step_um=first,
         mild_step_um=MILD * first,
         growth=growth or (2.2 if flat else 2.6),
-        largest_um=width / (8 if flat else 5),
+        largest_um=width / 8,
         largest_share=0.25 if flat else 0.5,
         largest_depth_um=cell.thickness_um / (10 if flat else 8),
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),
