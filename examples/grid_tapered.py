@@ -59,6 +59,9 @@ def main():
     print(table.to_string(index=False, float_format="{:.4g}".format))
     gain = float(np.interp(LEAST_UM, table["tip_um"][::-1], table["gain_percent"][::-1]))
     print(f"with a tip of {LEAST_UM} µm, the least that can be printed, tapering gains {gain:.3f} % of the power")
+    finer = fc.grid_maximum_power(layout(SHARES[0]), current, fineness=2.0).power_mW
+    uniform = float(table["power_mW"][0])
+    print(f"uniform fingers: {fc.with_bar(uniform, abs(uniform - finer))} mW, ± the change on a finer mesh")
     fc.write_table(table, results / "grid_tapered.csv")
     plot_repeat_unit(curves[0.2].maximum_power, results / "grid_tapered.png")
     return table, gain, curves
