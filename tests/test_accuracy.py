@@ -33,6 +33,16 @@ def test_bar_of_a_geometric_sequence_holds_and_is_tight(share):
     assert errors[-1] < bar < 4 * errors[-1]
 
 
+@pytest.mark.parametrize("share", [0.25, 0.35, 0.6])
+@pytest.mark.parametrize("steps", [(1.0, 0.5), (0.5, 1.0), (1.0, 1.2)])
+def test_bar_holds_and_is_tight_for_unequal_steps(share, steps):
+    """The error falls by `share` per level; the last two steps are parts of one, or more."""
+    levels = np.cumsum([0.0, 1.0, *steps])
+    errors = 1e-2 * share**levels
+    bar = error_bar(list(1 + errors), list(0.25 ** np.diff(levels)), 1.0, steps)
+    assert errors[-1] < bar < 4 * errors[-1]
+
+
 def test_bar_of_a_lucky_difference_is_not_small():
     """Two errors of opposite sign pass through zero: 1e-3, 1e-4, then -1e-5 by chance next to 1e-4."""
     values = [1.001, 1.0001, 1.000099]

@@ -318,9 +318,9 @@ def test_script_without_a_main_guard_is_not_run_again(script):
 def test_interrupt_from_the_keyboard_with_processes(script):
     process = script(300, 310, 600, 610)
     assert process.stdout.readline() == "started\n"
-    time.sleep(6)
+    time.sleep(10)
     os.killpg(process.pid, signal.SIGINT)  # as a terminal does: to all processes of the group
-    out, err = process.communicate(timeout=20)
+    out, err = process.communicate(timeout=90)
     assert out.startswith("2 True"), err
     assert "2 of 4 points are finished" in err
 

@@ -214,7 +214,7 @@ def references() -> None:
             for order, layers in ((3, 5), (4, 6)):
                 n, share = library.geometric(problem, order, layers)
                 found.append(f"ngsolve, order {order}, {layers} layers, {n} unknowns: {share:.5f}")
-        solution = fc.solve_excess(fc.problem(problem.cell, level=0.5 if short == "corner" else -0.5))
+        solution = fc.solve_excess(fc.problem(problem.cell, level=1.0 if short == "corner" else 0.0))
         found.append(f"package, {solution.problem.space.size} unknowns: {solution.ledger.share('metal'):.5f}")
         print(f"{problem.name}: " + "; ".join(found), flush=True)
 

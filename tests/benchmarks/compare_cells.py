@@ -80,8 +80,8 @@ CORNER_SHARE = 0.29221
 WIDE_SHARE = 0.60624
 NARROW_SHARE = 0.68033
 """Collected shares. Two independent ways agree to 0.02 %, as `compare.py --references` shows: ngsolve with elements of
-order 4 on six anisotropic geometric refinements towards the singular edges, and the package on a mesh finer by one
-level than those that the error asked for takes."""
+order 4 on six anisotropic geometric refinements towards the singular edges, and the package on finer meshes than those
+that the error asked for takes."""
 
 
 def linear_problems() -> dict[str, Linear]:

@@ -30,7 +30,7 @@ def half_lit(dimension, lifetime_us):
     sides = {"x_min": BARE_METAL, "x_max": BARE_METAL}
     light = fc.Light.uniform(1e18, mask=fc.HalfPlane(100))
     base = constant_base(D, lifetime_us, thickness_um=10)
-    return fc.solve_excess(fc.problem(cell_of(base, 200, dimension, sides=sides, light=light)))
+    return fc.solve_excess(fc.problem(cell_of(base, 200, dimension, sides=sides, light=light), level=0))
 
 
 def test_half_lit_slab_without_recombination(dimension):

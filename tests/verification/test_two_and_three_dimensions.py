@@ -93,7 +93,7 @@ def test_disc_contact_on_a_slab(a_over_h, expected):
 @pytest.mark.parametrize(
     ("fineness", "tolerance"),
     [
-        ({}, 1.5e-3),
+        ({"level": 0}, 1.5e-3),
         pytest.param({"first_step_um": 0.06, "growth": 1.8}, 2e-4, marks=pytest.mark.slow),
     ],
     ids=["default", "fine"],
