@@ -43,7 +43,7 @@ _WHERE = {
     "sweep": "studies.sweep",
     "best_point": "studies.best",
     "distinguishable": "studies.best",
-    "with_bar": "analysis.accuracy",
+    "with_bar": "analysis.uncertainty",
     "with_bars": "studies.columns",
     "changed": "studies.paths",
     "known_paths": "studies.paths",

@@ -12,7 +12,8 @@ import pytest
 from simple_cells import constant_base
 
 import fem_carriers as fc
-from fem_carriers.analysis.accuracy import error_bar, with_bar
+from fem_carriers.analysis.accuracy import error_bar
+from fem_carriers.analysis.uncertainty import with_bar
 
 sys.path.append(str(Path(__file__).parent / "benchmarks"))
 REAR = fc.Surface(J0_fA_per_cm2=10, contact=fc.Contact("rear", contact_resistivity_mohm_cm2=5))

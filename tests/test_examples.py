@@ -1,47 +1,19 @@
 """Every example runs, leaves its files, and its headline number is what physics says."""
 
-import importlib.util
 import math
 import re
 import runpy
 import sys
 import warnings
-from pathlib import Path
 
 import numpy as np
 import pytest
+from example_files import EXAMPLES, assert_written, number_after
 from scipy.optimize import brentq
 from scipy.special import i0, i1, k0, k1
 
 import fem_carriers as fc
 from fem_carriers.constants import ELEMENTARY_CHARGE_C
-
-EXAMPLES = Path(__file__).resolve().parents[1] / "examples"
-
-
-@pytest.fixture
-def example(tmp_path, monkeypatch):
-    """Import an example by name, away from its folder; what it writes lands in a temporary one."""
-    monkeypatch.chdir(tmp_path)
-
-    def load(name):
-        spec = importlib.util.spec_from_file_location(f"example_{name}", EXAMPLES / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(module)
-        return module
-
-    return load
-
-
-def assert_written(*names):
-    found = {p.name: p.stat().st_size for p in Path("results").iterdir()}
-    for name in names:
-        assert found.get(name, 0) > 1000, f"{name} not among {found}"
-
-
-def number_after(text, words):
-    """The number that follows these words in the printed text."""
-    return float(text.split(words, 1)[1].split()[0].strip(",;%"))
 
 
 @pytest.mark.parametrize("path", sorted(EXAMPLES.glob("*.py")), ids=lambda p: p.stem)

@@ -1,41 +1,14 @@
 """The examples on grids run, leave their files, and say what formulas say."""
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
+from example_files import assert_written, number_after
 from scipy.integrate import quad
 
 from fem_carriers.grid.cell_curve import cell_at
 from fem_carriers.grid.diodes import diode_current
-
-EXAMPLES = Path(__file__).resolve().parents[1] / "examples"
-
-
-@pytest.fixture
-def example(tmp_path, monkeypatch):
-    """Import an example by name, away from its folder; what it writes lands in a temporary one."""
-    monkeypatch.chdir(tmp_path)
-
-    def load(name):
-        spec = importlib.util.spec_from_file_location(f"example_{name}", EXAMPLES / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(module)
-        return module
-
-    return load
-
-
-def assert_written(*names):
-    found = {p.name: p.stat().st_size for p in Path("results").iterdir()}
-    for name in names:
-        assert found.get(name, 0) > 1000 or (name.endswith(".csv") and found.get(name, 0) > 100), f"{name}: {found}"
-
-
-def number_after(text, words):
-    return float(text.split(words, 1)[1].split()[0].strip(",;%"))
 
 
 def test_lab_cell(example, capsys):

@@ -1,35 +1,12 @@
 """The examples of quantum efficiency, grain boundary and fit run, leave their files and say what physics says."""
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
+from example_files import assert_written
 
 import fem_carriers as fc
-
-EXAMPLES = Path(__file__).resolve().parents[1] / "examples"
-
-
-@pytest.fixture
-def example(tmp_path, monkeypatch):
-    """Import an example by name, away from its folder; what it writes lands in a temporary one."""
-    monkeypatch.chdir(tmp_path)
-
-    def load(name):
-        spec = importlib.util.spec_from_file_location(f"example_{name}", EXAMPLES / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(module)
-        return module
-
-    return load
-
-
-def assert_written(*names):
-    found = {p.name: p.stat().st_size for p in Path("results").iterdir()}
-    for name in names:
-        assert found.get(name, 0) > 100, f"{name} not among {found}"
 
 
 def test_quantum_efficiency(example, capsys):

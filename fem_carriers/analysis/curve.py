@@ -12,10 +12,11 @@ import numpy as np
 
 from ..cell import checks
 from ..errors import Complaints
-from .accuracy import Numbers, Uncertainty, refine, with_bar
+from .accuracy import Numbers, refine
 from .climb import CurveClimb
 from .ladder import starting_problem, wanted_target
 from .tracer import KeyPoints, Point, key_points
+from .uncertainty import Uncertainty, with_bar
 
 if TYPE_CHECKING:
     import pandas as pd

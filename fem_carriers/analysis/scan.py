@@ -78,7 +78,7 @@ def scan_line(
     """
     import pandas as pd
 
-    solution, response, spot = _prepared(
+    solution, response, spot = prepared_scan(
         "scan_line", problem, BeamSpot(spot_diameter_um, spot_shape), wavelength_nm=wavelength_nm,
         absorption_per_cm=absorption_per_cm, terminal=terminal, reflectance=reflectance, path=path, enters=enters,
         voltage_V=voltage_V, form=form,
@@ -86,7 +86,7 @@ def scan_line(
     ends = _line_ends(solution.problem, start_um, end_um, points)
     share = np.linspace(0, 1, points)
     where = ends[0] + (ends[1] - ends[0]) * share[:, None]
-    signals = _signals(response, spot, where)
+    signals = spot_signals(response, spot, where)
     columns = {"distance_um": share * float(np.linalg.norm(ends[1] - ends[0])), "x_um": where[:, 0]}
     columns |= {"y_um": where[:, 1]} if where.shape[1] == 2 else {}
     return pd.DataFrame(columns | dict(zip(VALUES, signals, strict=True)))
@@ -121,7 +121,7 @@ def scan_map(
     """
     import pandas as pd
 
-    solution, response, spot = _prepared(
+    solution, response, spot = prepared_scan(
         "scan_map", problem, BeamSpot(spot_diameter_um, spot_shape), wavelength_nm=wavelength_nm,
         absorption_per_cm=absorption_per_cm, terminal=terminal, reflectance=reflectance, path=path, enters=enters,
         voltage_V=voltage_V, form=form,
@@ -133,11 +133,11 @@ def scan_map(
         problems.unless(bool(np.isfinite(axis).all()) and axis.size > 0, f"{name} = {axis}", "finite positions")
     problems.raise_if_any()
     where = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 2)
-    signals = _signals(response, spot, where)
+    signals = spot_signals(response, spot, where)
     return pd.DataFrame({"x_um": where[:, 0], "y_um": where[:, 1]} | dict(zip(VALUES, signals, strict=True)))
 
 
-def _prepared(
+def prepared_scan(
     what: str, given: Given, spot: BeamSpot, *, wavelength_nm: Any, absorption_per_cm: Any, terminal: str | None,
     reflectance: Any, path: str | None, enters: str | None, voltage_V: Any, form: str,
 ) -> tuple[Solution, ColumnResponse, BeamSpot]:  # fmt: skip
@@ -176,7 +176,7 @@ def _line_ends(problem: Problem, start_um: Any, end_um: Any, points: Any) -> tup
     return ends[0], ends[1]
 
 
-def _signals(response: ColumnResponse, spot: BeamSpot, where: NDArray[np.float64]) -> list[Any]:
+def spot_signals(response: ColumnResponse, spot: BeamSpot, where: NDArray[np.float64]) -> list[Any]:
     """External, internal and shaded, in percent, at spot centres (n, 1 or 2)."""
     sweeps = [_sweep(response, spot, where[:, i], axis) for i, axis in enumerate("xy"[: where.shape[1]])]
     collected, let_in = _plan(response, sweeps)

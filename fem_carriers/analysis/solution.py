@@ -23,7 +23,7 @@ if TYPE_CHECKING:
     from ..transport.newton import Outcome
     from ..transport.problem import Problem
     from ..transport.state import SolvedState
-    from .accuracy import Uncertainty
+    from .uncertainty import Uncertainty
 
 
 @dataclass(frozen=True, eq=False)

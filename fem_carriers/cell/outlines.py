@@ -87,7 +87,7 @@ def patch_outlines(patch: Patch, frame: Frame, segments: int = 64, *, opaque: bo
     list of shapely.Polygon
         Empty where there is nothing (a patch that does not shade, a copy outside).
     """
-    clipped = (copy.intersection(frame.box) for copy in _copies(patch, frame, segments, opaque))
+    clipped = (copy.intersection(frame.box) for copy in whole_copies(patch, frame, segments, opaque))
     return [c for c in clipped if c.area > 1e-9]
 
 
@@ -119,7 +119,7 @@ def shade_size(patch: Patch, has_contact: bool) -> bool:
     return any(v is not None and v > 0 for v in stated) or (has_contact and not any(v == 0 for v in stated))
 
 
-def _copies(patch: Patch, frame: Frame, segments: int, opaque: bool) -> list[shapely.Polygon]:
+def whole_copies(patch: Patch, frame: Frame, segments: int, opaque: bool) -> list[shapely.Polygon]:
     """Copies of the patch over the period and its neighbours."""
     from shapely import affinity
 
@@ -233,7 +233,7 @@ def _sizes(patch: Patch, frame: Frame) -> list[tuple[str, float, float]]:
 
 
 def _check_mirrors(problems: Complaints, patch: Patch, frame: Frame, where: str) -> None:
-    copies = _copies(patch, frame, 64, False)
+    copies = whole_copies(patch, frame, 64, False)
     inside = [c for c in copies if c.intersection(frame.box).area > 1e-9]
     if not inside:
         place = f"x from {frame.x[0]:g} to {frame.x[1]:g} µm"

@@ -104,7 +104,8 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
         problems.unless(good, f"growth = {growth!r}", "a number above 1, at most 4", "2")
     problems.raise_if_any()
     flat = cell.dimension == 2
-    first = first_step_um or smallest_feature_um(cell) / (400 if flat else 200)
+    feature = smallest_feature_um(cell)
+    first = first_step_um or feature / (400 if flat else 200)
     width = max(cell.frame.x[1] - cell.frame.x[0], 0.0 if flat else cell.frame.y[1] - cell.frame.y[0])
     short = diffusion_length_um(cell.base, cell) / 3
     chosen = Fineness(
@@ -115,9 +116,9 @@ def choose_fineness(cell: UnitCell, first_step_um: float | None, growth: float |
         largest_share=0.25 if flat else 0.5,
         largest_depth_um=cell.thickness_um / (10 if flat else 8),
         plain_step_um=max(min(cell.thickness_um / (60 if flat else 20), short), first),
-        circle_corners=circle_corners(first, cell),
+        circle_corners=0,
     ).at_level(level)
-    return dataclasses.replace(chosen, circle_corners=circle_corners(chosen.first_step_um, cell))
+    return dataclasses.replace(chosen, circle_corners=corners_for(feature / chosen.first_step_um))
 
 
 def _has_other_than_boxes(cell: UnitCell) -> bool:
@@ -131,7 +132,11 @@ def circle_corners(first_step_um: float, cell: UnitCell) -> int:
     The polygon has the area of the circle; the current into it then differs by 2e-4 for 16 corners, less for more, and
     every corner is a grid line.
     """
-    ratio = smallest_feature_um(cell) / first_step_um
+    return corners_for(smallest_feature_um(cell) / first_step_um)
+
+
+def corners_for(ratio: float) -> int:
+    """The same from the ratio of the smallest feature to the first step."""
     return int(8 * round(min(max(16.0, 2.4 * math.sqrt(ratio)), 96.0) / 8))
 
 

@@ -138,6 +138,7 @@ class _Interval:
 
     @property
     def slope(self) -> float:
+        """Rise of the allowed step with the distance from an end."""
         return self.growth - 1
 
     @property

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..cell.outlines import UNIT_DEPTH_UM, _copies, shade_size
+from ..cell.outlines import UNIT_DEPTH_UM, shade_size, whole_copies
 from ..cell.patches import BELOW, Dot
 
 if TYPE_CHECKING:
@@ -52,7 +52,7 @@ def _patch_boxes(old: UnitCell, new: UnitCell) -> list[tuple[tuple[bool, Any], A
             for opaque in (False, True):
                 if opaque and not _shades(a):
                     continue
-                pairs = zip(_copies(a, old.frame, 4, opaque), _copies(b, new.frame, 4, opaque), strict=True)
+                pairs = zip(whole_copies(a, old.frame, 4, opaque), whole_copies(b, new.frame, 4, opaque), strict=True)
                 found += [((isinstance(a, Dot), shape), moved.bounds) for shape, moved in pairs]
     return sorted(found, key=lambda box: not box[0][0])  # where outlines cross, straight ones stay straight
 

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from .plots import _finish
+from .canvas import finish
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -58,7 +58,7 @@ def draw_cell(cell: UnitCell, picture: str | Path | None = None) -> Figure:
             _draw_plan(ax, cell, [p for p in parts if p.side == side], side)
     y = LINE_IN * len(lines) / figure.get_figheight()
     figure.text(0.02, y, "\n".join(lines), va="top", fontsize=9, linespacing=1.35)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def cell_parts(cell: UnitCell) -> list[Part]:

@@ -12,7 +12,7 @@ from ..errors import Complaints, MeshError
 from ..files.atomic import target, write_atomically
 from .labels import label
 from .style import DARK, font_file, linear_range, log_by_default, log_range
-from .window import PICTURES, _no_display_warnings, _plotter, has_display
+from .window import PICTURES, has_display, new_plotter, no_display_warnings
 
 FIRST = ("excess_density_per_cm3",)
 KEYS = "n / b  field    l  log scale    q  close"
@@ -63,8 +63,8 @@ def view_field_file(
     if picture is None and not has_display():
         picture = path.with_suffix(".png")
     out = None if picture is None else target("picture", picture, PICTURES)
-    with nullcontext() if has_display() else _no_display_warnings():
-        plotter = _plotter(out is not None, size)
+    with nullcontext() if has_display() else no_display_warnings():
+        plotter = new_plotter(out is not None, size)
         try:
             shown = _Shown(plotter, grid, names, field)
             shown.draw()

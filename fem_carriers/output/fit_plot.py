@@ -10,8 +10,8 @@ import numpy as np
 from ..errors import Complaints
 from ..studies.gradients import input_words
 from ..units import split_name
+from .canvas import finish, need, new_figure
 from .labels import label, words
-from .plots import _figure, _finish, _need
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -49,12 +49,12 @@ def plot_fit(fit: Fit, picture: str | Path | None = None, *, curve: str | None =
     problems.unless(curve is None or curve in fit.curves, f"curve = {curve!r}", f"one of {', '.join(fit.curves)}")
     problems.raise_if_any()
     table = fit.curves[curve or next(iter(fit.curves))]
-    figure, axes = _figure(2, (7.2, 5.6), ratios=(2.6, 1.0))
+    figure, axes = new_figure(2, (7.2, 5.6), ratios=(2.6, 1.0))
     _draw_curve(axes[0], table)
     _draw_residuals(axes[1], table)
     axes[1].set_xlabel(label(str(table.columns[0])))
     axes[0].set_title("\n".join(_wrapped(fit.statements)), fontsize=9, loc="left")
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _draw_curve(ax: Axes, table: pd.DataFrame) -> None:
@@ -107,14 +107,14 @@ def plot_sensitivity(table: pd.DataFrame, picture: str | Path | None = None, *, 
         No such figure, nothing to show, or a picture that cannot be written.
     """
     known = [str(c).removeprefix("change_") for c in table if str(c).startswith("change_")]
-    _need("plot_sensitivity", bool(known), f"columns {', '.join(map(str, table))}", "a table of sensitivity_table")
+    need("plot_sensitivity", bool(known), f"columns {', '.join(map(str, table))}", "a table of sensitivity_table")
     chosen = figure or ("efficiency_percent" if "efficiency_percent" in known else known[-1])
-    _need("plot_sensitivity", chosen in known, f"figure = {chosen!r}", " or ".join(known))
+    need("plot_sensitivity", chosen in known, f"figure = {chosen!r}", " or ".join(known))
     shown = table[np.isfinite(table[f"change_{chosen}"]) & (table[f"change_{chosen}"] != 0)]
-    _need("plot_sensitivity", len(shown) > 0, "a table without a single change", "inputs that matter")
+    need("plot_sensitivity", len(shown) > 0, "a table without a single change", "inputs that matter")
     order = shown[f"change_{chosen}"].abs().sort_values(ascending=False).index[:MOST_BARS][::-1]
     names, values = shown.loc[order, "input"], shown.loc[order, f"change_{chosen}"].to_numpy(dtype=float)
-    drawn, axes = _figure(1, (7.6, 1.4 + 0.3 * len(values)))
+    drawn, axes = new_figure(1, (7.6, 1.4 + 0.3 * len(values)))
     ax, size = axes[0], np.abs(values)
     ax.barh(np.arange(len(values)), size, color=[GAIN if v > 0 else LOSS for v in values], height=0.7)
     ax.set_yticks(np.arange(len(values)), [input_words(str(n)) for n in names])
@@ -126,7 +126,7 @@ def plot_sensitivity(table: pd.DataFrame, picture: str | Path | None = None, *, 
     unit = split_name(chosen)[1]
     ax.set_xlabel(f"size of the change of {words(chosen)} for 1 % more ({'% absolute' if unit == '%' else unit})")
     ax.grid(axis="y", visible=False)
-    return _finish(drawn, picture)
+    return finish(drawn, picture)
 
 
 def _legend_of_signs(ax: Axes) -> None:

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .canvas import check_columns, finish, need, new_figure
 from .labels import label
-from .plots import _check_columns, _figure, _finish, _need
 from .style import DARK
 
 if TYPE_CHECKING:
@@ -43,14 +43,14 @@ def plot_map(
     InputError
         A missing or non-numeric column, several rows for one point, no result, or a picture that cannot be written.
     """
-    _check_columns("plot_map", table, [x, y, value])
+    check_columns("plot_map", table, [x, y, value])
     repeated = bool(table.duplicated([x, y]).any())
-    _need("plot_map", not repeated, f"several rows of the same {x} and {y}", "one row per point")
+    need("plot_map", not repeated, f"several rows of the same {x} and {y}", "one row per point")
     grid = table.pivot(index=y, columns=x, values=value)
     numbers = grid.to_numpy(dtype=float)
-    _need("plot_map", bool(np.isfinite(numbers).any()), "a table without a single finite result", "one or more results")
+    need("plot_map", bool(np.isfinite(numbers).any()), "a table without a single finite result", "one or more results")
     rows, columns = numbers.shape
-    figure, axes = _figure(1, (max(5.0, 2.2 + 0.75 * columns), max(2.8, 1.4 + 0.55 * rows)))
+    figure, axes = new_figure(1, (max(5.0, 2.2 + 0.75 * columns), max(2.8, 1.4 + 0.55 * rows)))
     ax = axes[0]
     image = ax.imshow(numbers, origin="lower", aspect="auto", cmap="viridis")
     ax.set_xticks(range(columns), [f"{v:.4g}" for v in grid.columns])
@@ -60,7 +60,7 @@ def plot_map(
     ax.grid(visible=False)
     _write_numbers(ax, numbers)
     figure.colorbar(image, ax=ax, label=label(value))
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _write_numbers(ax: Axes, numbers: NDArray[np.float64]) -> None:

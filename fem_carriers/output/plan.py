@@ -9,6 +9,7 @@ import numpy as np
 
 from ..errors import Complaints
 from ..units import split_name
+from .canvas import finish, new_figure
 from .plan_data import (
     FIELDS,
     PLURALS,
@@ -22,7 +23,6 @@ from .plan_data import (
     rows_mm,
     terminals_mm,
 )  # fmt: skip
-from .plots import _figure, _finish
 from .style import DARK, OKABE_ITO, linear_range
 
 if TYPE_CHECKING:
@@ -86,7 +86,7 @@ def plot_plan(
     handles = [_draw_metal(ax, solution, grid, kind, scale) for kind in metal_kinds(solution, grid)]
     handles += _draw_marks(ax, solution, grid)
     _legend_below(figure, handles)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def plot_repeat_unit(
@@ -122,7 +122,7 @@ def plot_repeat_unit(
     grid = _grid(solution, grid)
     x, y = _unit_mm(solution, grid, at_mm)
     long, short = float(np.ptp(y)), float(np.ptp(x))
-    figure, axes = _figure(1, (9.6, float(np.clip(1.35 + 8.0 * short / long, 2.2, 9.0))))
+    figure, axes = new_figure(1, (9.6, float(np.clip(1.35 + 8.0 * short / long, 2.2, 9.0))))
     figure.set_layout_engine("compressed")
     ax = axes[0]
     ax.grid(visible=False)
@@ -136,7 +136,7 @@ def plot_repeat_unit(
     ax.set_ylabel("x (mm)")
     _legend_below(figure, handles)
     ax.set_title(f"{FIELDS[field]}; the terminals are at {1e3 * solution.voltage_V:.1f} mV", fontsize=10.5, loc="left")
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _grid(solution: GridSolution, grid: str | None) -> str:
@@ -150,7 +150,7 @@ def _grid(solution: GridSolution, grid: str | None) -> str:
 def _sheet(width_mm: float, height_mm: float) -> tuple[Figure, Axes]:
     """A figure whose size follows the cell's."""
     across = 9.6 if width_mm >= height_mm else 7.2
-    figure, axes = _figure(1, (across, float(np.clip(1.5 + 0.82 * across * height_mm / width_mm, 3.2, 9.6))))
+    figure, axes = new_figure(1, (across, float(np.clip(1.5 + 0.82 * across * height_mm / width_mm, 3.2, 9.6))))
     figure.set_layout_engine("compressed")
     axes[0].set_aspect("equal")
     axes[0].grid(visible=False)

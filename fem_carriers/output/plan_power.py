@@ -12,8 +12,8 @@ from ..errors import Complaints
 from ..grid.losses import GridLosses
 from ..studies.grid_choice import LayoutChoice
 from ..units import split_name
+from .canvas import finish, new_figure
 from .labels import words
-from .plots import _figure, _finish
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -68,11 +68,11 @@ def plot_grid_losses(
     problems.unless(bool(rows), "budgets without losses", "a lit cell under bias")
     problems.raise_if_any()
     across = 4.8 + 1.25 * len(budgets)
-    figure, axes = _figure(1, (across, 5.4))
+    figure, axes = new_figure(1, (across, 5.4))
     figure.set_layout_engine("none")  # texts beside the axes are placed here
     axes[0].set_position((1.45 / across, 0.13, 1.25 * len(budgets) / across, 0.8))
     _draw_stack(axes[0], rows, budgets)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _rows(budgets: Mapping[str, GridLosses]) -> list[tuple[str, bool, NDArray[np.float64]]]:
@@ -194,14 +194,14 @@ def plot_trade(choice: LayoutChoice, picture: str | Path | None = None) -> Figur
     problems.raise_if_any()
     table = choice.trade
     mass = choice.traded
-    figure, axes = _figure(2, (7.6, 6.4), ratios=(1.6, 1.0))
+    figure, axes = new_figure(2, (7.6, 6.4), ratios=(1.6, 1.0))
     _draw_trade(axes[0], choice, mass)
     axes[1].plot(table[mass], table["gain_mW_per_mg"], color=OKABE_ITO[2])
     axes[1].set_ylim(bottom=0)
     axes[1].set_ylabel("one more mg gives (mW)")
     axes[1].set_xlabel(f"{words(mass)} (mg)")
     figure.align_ylabels(axes)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _draw_trade(ax: Axes, choice: LayoutChoice, mass: str) -> None:

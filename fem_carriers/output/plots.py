@@ -3,15 +3,14 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..analysis.accuracy import with_bar
-from ..errors import Complaints
-from ..files.atomic import target, write_atomically
+from ..analysis.uncertainty import with_bar
 from ..studies.best import best_point
 from ..units import split_name
+from .canvas import check_columns, finish, legend_beside, need, new_figure
 from .labels import label, words
 from .style import DARK, OKABE_ITO, log_by_default
 
@@ -26,13 +25,6 @@ OPTICAL_IN_POWER = ("shaded", "parasitic")
 """Reflected and escaped light hardly depends on the contacts and would hide the rest of a stack of powers."""
 OPTICAL = ("shaded", "reflected", "escaped", "parasitic")
 COORDINATES = ("distance_um", "x_um", "y_um", "z_um")
-PICTURES = (".png", ".pdf", ".svg")
-_LOOK: Any = {
-    "font.size": 10, "axes.labelsize": 10.5, "axes.spines.top": False, "axes.spines.right": False,
-    "axes.grid": True, "grid.alpha": 0.25, "grid.linewidth": 0.6, "axes.axisbelow": True,
-    "axes.formatter.use_mathtext": True,
-    "legend.frameon": False, "legend.fontsize": 9, "axes.edgecolor": DARK, "lines.linewidth": 1.8,
-}  # fmt: skip
 
 
 def plot_sweep(
@@ -66,14 +58,16 @@ def plot_sweep(
         A missing or non-numeric column, no result at all, or a picture that cannot be written.
     """
     table = table.reset_index() if x in table.index.names else table
-    _check_columns("plot_sweep", table, [x] if y is None else [x, y])
+    check_columns("plot_sweep", table, [x] if y is None else [x, y])
     table = table.sort_values(x)
     at = table[x].to_numpy(dtype=float)
     value, bars, axis_label, unit = _judged(table, y)
     good = np.isfinite(value) & np.isfinite(at)
-    _need("plot_sweep", bool(good.any()), "a table without a single finite result", "one or more results")
+    need("plot_sweep", bool(good.any()), "a table without a single finite result", "one or more results")
     losses = _loss_columns(table)
-    figure, axes = _figure(2 if losses else 1, (7.2, 6.6 if losses else 3.9), ratios=(1.0, 1.15)[: 2 if losses else 1])
+    figure, axes = new_figure(
+        2 if losses else 1, (7.2, 6.6 if losses else 3.9), ratios=(1.0, 1.15)[: 2 if losses else 1]
+    )
     _draw_best(axes[0], at[good], value[good], bars[good], (split_name(x)[1], unit))
     if (~good).any():
         lower_edge = axes[0].get_xaxis_transform()
@@ -85,8 +79,8 @@ def plot_sweep(
         axes[1].set_ylabel(f"losses ({'mW' if losses[0].endswith(POWER) else 'mA'}/cm²)")
     axes[-1].set_xlabel(label(x))
     for ax in axes:
-        _legend_beside(ax)
-    return _finish(figure, picture)
+        legend_beside(ax)
+    return finish(figure, picture)
 
 
 def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], NDArray[np.float64], str, str]:
@@ -99,7 +93,7 @@ def _judged(table: pd.DataFrame, y: str | None) -> tuple[NDArray[np.float64], ND
         return table[y].to_numpy(dtype=float), bars.to_numpy(dtype=float), label(y), split_name(y)[1]
     collected = [c for c in table if str(c).startswith("collected_") and str(c).endswith(CURRENT)]
     known = ", ".join(map(str, table.columns))
-    _need("plot_sweep", bool(collected), f"columns {known}", "collected_…_mA_per_cm2, or y= a column to judge by")
+    need("plot_sweep", bool(collected), f"columns {known}", "collected_…_mA_per_cm2, or y= a column to judge by")
     total = table[collected].to_numpy(dtype=float).sum(axis=1)
     all_bars = [table.get(f"error_bar_{c}", none).to_numpy(dtype=float) for c in collected]
     text = label(str(collected[0])) if len(collected) == 1 else "collected (mA/cm²)"
@@ -182,13 +176,13 @@ def plot_line(table: pd.DataFrame, log: bool | None = None, picture: str | Path 
     InputError
         No ``distance_um``, or no field.
     """
-    _check_columns("plot_line", table, ["distance_um"])
+    check_columns("plot_line", table, ["distance_um"])
     fields = [str(c) for c in table if c not in COORDINATES]
-    _need("plot_line", bool(fields), f"columns {', '.join(map(str, table))}", "distance_um and a field")
-    _check_columns("plot_line", table, fields)
+    need("plot_line", bool(fields), f"columns {', '.join(map(str, table))}", "distance_um and a field")
+    check_columns("plot_line", table, fields)
     values = table[fields].to_numpy(dtype=float)
     log = any(log_by_default(f, table[f].to_numpy(dtype=float)) for f in fields) if log is None else log
-    figure, axes = _figure(1, (6.4, 4.0))
+    figure, axes = new_figure(1, (6.4, 4.0))
     for i, field in enumerate(fields):
         shown = np.where(values[:, i] > 0, values[:, i], np.nan) if log else values[:, i]
         axes[0].plot(table["distance_um"], shown, color=OKABE_ITO[i % len(OKABE_ITO)], label=words(field))
@@ -197,8 +191,8 @@ def plot_line(table: pd.DataFrame, log: bool | None = None, picture: str | Path 
     unit = label(fields[0]).removeprefix(words(fields[0])).strip()
     axes[0].set_ylabel(label(fields[0]) if len(fields) == 1 else unit.strip("()"))
     if len(fields) > 1:
-        _legend_beside(axes[0])
-    return _finish(figure, picture)
+        legend_beside(axes[0])
+    return finish(figure, picture)
 
 
 def plot_lateral_losses(table: pd.DataFrame, picture: str | Path | None = None) -> Figure:
@@ -222,9 +216,9 @@ def plot_lateral_losses(table: pd.DataFrame, picture: str | Path | None = None) 
     """
     bins = ["distance_from_um", "distance_to_um"]
     groups = (["generated", "collected"], ["lost_in_bulk", "lost_at_surfaces"])
-    _check_columns("plot_lateral_losses", table, [*bins, *(g + CURRENT for group in groups for g in group)])
+    check_columns("plot_lateral_losses", table, [*bins, *(g + CURRENT for group in groups for g in group)])
     edges = np.append(table[bins[0]].to_numpy(dtype=float), float(table[bins[1]].iloc[-1]))
-    figure, axes = _figure(2, (7.2, 5.6), ratios=(1.0, 1.0))
+    figure, axes = new_figure(2, (7.2, 5.6), ratios=(1.0, 1.0))
     styles = iter(zip(OKABE_ITO[1::-1] + OKABE_ITO[5:6] + OKABE_ITO[2:3], ("-", "-", "-", "--"), strict=True))
     for ax, group in zip(axes, groups, strict=True):
         for name in group:
@@ -235,62 +229,6 @@ def plot_lateral_losses(table: pd.DataFrame, picture: str | Path | None = None) 
         ax.set_ylim(min(0.0, 1.05 * low), 1.08 * high or 1.0)
         ax.set_xlim(edges[0], edges[-1])
         ax.set_ylabel("per bin (mA/cm² of cell)")
-        _legend_beside(ax)
+        legend_beside(ax)
     axes[-1].set_xlabel("distance from the contact (µm)")
-    return _finish(figure, picture)
-
-
-def _need(what: str, condition: bool, given: str, allowed: str) -> None:
-    problems = Complaints(what)
-    problems.unless(condition, given, allowed)
-    problems.raise_if_any()
-
-
-def _check_columns(what: str, table: pd.DataFrame, names: list[str]) -> None:
-    from pandas.api.types import is_numeric_dtype
-
-    problems = Complaints(what)
-    for name in names:
-        known = ", ".join(map(str, table.columns))
-        if problems.unless(name in table, f"no column {name!r}", f"one of {known}"):
-            problems.unless(is_numeric_dtype(table[name]), f"column {name!r} of {table[name].dtype}", "numbers")
-    problems.unless(len(table) > 0, "an empty table", "one or more rows")
-    problems.raise_if_any()
-
-
-def _figure(
-    rows: int, size: tuple[float, float], ratios: tuple[float, ...] | None = None, shared: bool = True
-) -> tuple[Figure, list[Axes]]:
-    """A figure with its own canvas, so that nothing is registered globally; axes below each other, x shared or not."""
-    import matplotlib
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
-
-    with matplotlib.rc_context(_LOOK):
-        figure = Figure(figsize=size, layout="constrained")
-        FigureCanvasAgg(figure)
-        axes = figure.subplots(rows, 1, sharex=shared, squeeze=False, height_ratios=ratios)
-    return figure, list(axes[:, 0])
-
-
-def _legend_beside(ax: Axes) -> None:
-    """Legend to the right of the axes, in the order in which areas are stacked (top first)."""
-    handles, names = ax.get_legend_handles_labels()
-    legend = ax.legend(
-        handles[::-1], names[::-1], loc="upper left", bbox_to_anchor=(1.01, 1.0), fontsize=9, frameon=False
-    )
-    legend.set_in_layout(False)  # a legend taller than its axes would squeeze them; see _finish
-
-
-def _finish(figure: Figure, picture: Any) -> Figure:
-    """Leave room for the legends beside the axes, and save."""
-    legends = [legend for ax in figure.axes if (legend := ax.get_legend()) is not None and not legend.get_in_layout()]
-    engine = figure.get_layout_engine()
-    if legends and engine is not None:
-        figure.canvas.draw()
-        widest = max(legend.get_window_extent().width for legend in legends)
-        engine.set(rect=(0.0, 0.0, 1.0 - widest / figure.bbox.width - 0.015, 1.0))  # type: ignore[call-arg]
-    if picture is not None:
-        path = target("picture", picture, PICTURES)
-        write_atomically(path, lambda p: figure.savefig(p, dpi=150))
-    return figure
+    return finish(figure, picture)

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..errors import Complaints
-from .plots import _figure, _finish
+from .canvas import finish, new_figure
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -50,7 +50,7 @@ def plot_curve(curve: CurrentVoltage, picture: str | Path | None = None) -> Figu
     matplotlib.figure.Figure
     """
     table = curve.table
-    figure, axes = _figure(2, (6.4, 6.0), ratios=(1.0, 1.0))
+    figure, axes = new_figure(2, (6.4, 6.0), ratios=(1.0, 1.0))
     for ax, name, color in zip(axes, ("current_mA_per_cm2", "power_mW_per_cm2"), OKABE_ITO, strict=False):
         ax.plot(table["voltage_V"], table[name], "-o", color=color, markersize=3.5)
         ax.axhline(0, color=DARK, linewidth=0.8)
@@ -59,7 +59,7 @@ def plot_curve(curve: CurrentVoltage, picture: str | Path | None = None) -> Figu
     axes[1].set_xlabel("voltage (V)")
     if curve.maximum_power is not None:
         _mark_maximum(axes, curve)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _mark_maximum(axes: list[Axes], curve: CurrentVoltage) -> None:
@@ -106,7 +106,7 @@ def plot_losses(losses: Losses, picture: str | Path | None = None) -> Figure:
     problems.unless(top > 0, "a budget without losses", "a solution under light or bias")
     problems.raise_if_any()
     bars = sorted((b for b in bars if b[2] > 1e-4 * top), key=lambda b: b[2])
-    figure, axes = _figure(1, (7.2, 1.4 + 0.32 * len(bars)))
+    figure, axes = new_figure(1, (7.2, 1.4 + 0.32 * len(bars)))
     ax = axes[0]
     values = np.array([b[2] for b in bars])
     ax.barh(np.arange(len(bars)), values, color=[KIND_COLORS[b[0]] for b in bars], height=0.72)
@@ -118,7 +118,7 @@ def plot_losses(losses: Losses, picture: str | Path | None = None) -> Figure:
     ax.grid(axis="y", visible=False)
     _legend_of_kinds(ax, [b[0] for b in bars])
     ax.set_title(f"{losses.output_mW_per_cm2:.2f} mW/cm² delivered to the terminals", fontsize=10.5, loc="left")
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _legend_of_kinds(ax: Axes, kinds: list[str]) -> None:

@@ -8,7 +8,7 @@ from collections import Counter
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.accuracy import with_bar
+from ..analysis.uncertainty import with_bar
 from ..studies.best import Best
 from ..studies.optimum import Optimum, place_text
 from ..studies.point import guarded

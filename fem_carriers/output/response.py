@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from .canvas import check_columns, finish, legend_beside, need, new_figure
 from .labels import label, words
-from .plots import _check_columns, _figure, _finish, _legend_beside, _need
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -43,11 +43,11 @@ def plot_quantum_efficiency(table: pd.DataFrame, picture: str | Path | None = No
         A missing column, too few rows, or a picture that cannot be written.
     """
     x = "wavelength_nm" if "wavelength_nm" in table else "absorption_per_cm"
-    _check_columns("plot_quantum_efficiency", table, [x, EXTERNAL, INTERNAL])
-    _need("plot_quantum_efficiency", len(table) > 1, "a single row", "two or more wavelengths")
+    check_columns("plot_quantum_efficiency", table, [x, EXTERNAL, INTERNAL])
+    need("plot_quantum_efficiency", len(table) > 1, "a single row", "two or more wavelengths")
     table = table.sort_values(x)
     at = table[x].to_numpy(dtype=float)
-    figure, axes = _figure(1, (8.4, 4.8))
+    figure, axes = new_figure(1, (8.4, 4.8))
     ax = axes[0]
     floor = table[EXTERNAL].to_numpy(dtype=float)
     for name, color, hatch in _losses(table):
@@ -62,8 +62,8 @@ def plot_quantum_efficiency(table: pd.DataFrame, picture: str | Path | None = No
     ax.set_xscale("linear" if x == "wavelength_nm" else "log")
     ax.set_xlabel(label(x))
     ax.set_ylabel("quantum efficiency and losses (%)")
-    _legend_beside(ax)
-    return _finish(figure, picture)
+    legend_beside(ax)
+    return finish(figure, picture)
 
 
 def _losses(table: pd.DataFrame) -> list[tuple[str, str, str]]:
@@ -99,19 +99,19 @@ def plot_scan_line(
         A missing column, or a picture that cannot be written.
     """
     named = tables if isinstance(tables, dict) else {"": tables}
-    _need("plot_scan_line", bool(named), "no table", "one or more scans")
+    need("plot_scan_line", bool(named), "no table", "one or more scans")
     for table in named.values():
-        _check_columns("plot_scan_line", table, ["x_um", value])
+        check_columns("plot_scan_line", table, ["x_um", value])
     x = "x_um" if all(np.ptp(t["x_um"]) > 0 for t in named.values()) else "y_um"
-    figure, axes = _figure(1, (7.2, 3.9))
+    figure, axes = new_figure(1, (7.2, 3.9))
     for i, (name, table) in enumerate(named.items()):
         axes[0].plot(table[x], table[value], color=OKABE_ITO[i % 7], linestyle=("-", "--", ":")[i // 7 % 3], label=name)
     axes[0].set_xlabel(label(x))
     axes[0].set_ylabel(label(value))
     axes[0].margins(x=0)
     if len(named) > 1:
-        _legend_beside(axes[0])
-    return _finish(figure, picture)
+        legend_beside(axes[0])
+    return finish(figure, picture)
 
 
 def plot_scan_map(table: pd.DataFrame, picture: str | Path | None = None, *, value: str = EXTERNAL) -> Figure:
@@ -135,16 +135,16 @@ def plot_scan_map(table: pd.DataFrame, picture: str | Path | None = None, *, val
     InputError
         A missing column, a single row of positions, or a picture that cannot be written.
     """
-    _check_columns("plot_scan_map", table, ["x_um", "y_um", value])
+    check_columns("plot_scan_map", table, ["x_um", "y_um", value])
     grid: Any = table.pivot_table(index="y_um", columns="x_um", values=value, dropna=False)
-    _need("plot_scan_map", min(grid.shape) > 1, f"{grid.shape[1]} × {grid.shape[0]} positions", "two or more each way")
+    need("plot_scan_map", min(grid.shape) > 1, f"{grid.shape[1]} × {grid.shape[0]} positions", "two or more each way")
     x, y = (np.asarray(a, dtype=float) for a in (grid.columns, grid.index))
     tall = float(np.clip(6.0 * np.ptp(y) / np.ptp(x), 1.5, 8.0))
-    figure, axes = _figure(1, (7.6, tall + 1.2))
+    figure, axes = new_figure(1, (7.6, tall + 1.2))
     image = axes[0].pcolormesh(x, y, grid.to_numpy(dtype=float), cmap="cividis", shading="nearest", rasterized=True)
     axes[0].set_aspect("equal")
     axes[0].grid(visible=False)
     axes[0].set_xlabel(label("x_um"))
     axes[0].set_ylabel(label("y_um"))
     figure.colorbar(image, ax=axes[0], label=label(value))
-    return _finish(figure, picture)
+    return finish(figure, picture)

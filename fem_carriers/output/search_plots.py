@@ -8,12 +8,12 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..analysis.accuracy import with_bar
+from ..analysis.uncertainty import with_bar
 from ..studies.optimum import place_text
 from ..studies.search import bars_of
 from ..units import split_name
+from .canvas import finish, legend_beside, need, new_figure
 from .labels import label
-from .plots import _figure, _finish, _legend_beside, _need
 from .style import DARK, OKABE_ITO
 
 if TYPE_CHECKING:
@@ -43,15 +43,15 @@ def plot_optimum(optimum: Optimum, picture: str | Path | None = None) -> Figure:
     """
     names = list(optimum.location)
     if len(names) == 2:
-        figure, axes = _figure(1, (7.2, 4.8))
+        figure, axes = new_figure(1, (7.2, 4.8))
         _draw_map(axes[0], optimum, names)
-        return _finish(figure, picture)
-    figure, axes = _figure(len(names), (7.2, 0.9 + 2.9 * len(names)), shared=False)
+        return finish(figure, picture)
+    figure, axes = new_figure(len(names), (7.2, 0.9 + 2.9 * len(names)), shared=False)
     for ax, name in zip(axes, names, strict=True):
         _draw_curve(ax, optimum, name, alone=len(names) == 1)
         ax.set_xlabel(label(name))
-    _legend_beside(axes[0])
-    return _finish(figure, picture)
+    legend_beside(axes[0])
+    return finish(figure, picture)
 
 
 def _draw_curve(ax: Axes, optimum: Optimum, name: str, alone: bool) -> None:
@@ -133,10 +133,10 @@ def plot_tolerance(tolerance: Tolerance, picture: str | Path | None = None) -> F
     matplotlib.figure.Figure
     """
     ratios = (1.0, 0.3 + 0.16 * len(tolerance.shares))
-    figure, axes = _figure(2, (7.2, 3.0 * sum(ratios) + 0.6), ratios=ratios, shared=False)
+    figure, axes = new_figure(2, (7.2, 3.0 * sum(ratios) + 0.6), ratios=ratios, shared=False)
     _draw_scatter(axes[0], tolerance)
     _draw_shares(axes[1], tolerance)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def plot_designs(tolerance: Tolerance, picture: str | Path | None = None) -> Figure:
@@ -158,12 +158,12 @@ def plot_designs(tolerance: Tolerance, picture: str | Path | None = None) -> Fig
     InputError
         No design variable, or several.
     """
-    _need(
+    need(
         "plot_designs", tolerance.by_design is not None, "a tolerance over no or several designs", "one design variable"
     )
-    figure, axes = _figure(1, (7.2, 3.9))
+    figure, axes = new_figure(1, (7.2, 3.9))
     _draw_designs(axes[0], tolerance)
-    return _finish(figure, picture)
+    return finish(figure, picture)
 
 
 def _draw_scatter(ax: Axes, tolerance: Tolerance) -> None:
@@ -179,7 +179,7 @@ def _draw_scatter(ax: Axes, tolerance: Tolerance) -> None:
     ax.set_xlabel(label(tolerance.quantity))
     ax.set_yticks([])
     ax.set_ylabel("frequency")
-    _legend_beside(ax)
+    legend_beside(ax)
 
 
 def _draw_shares(ax: Axes, tolerance: Tolerance) -> None:
@@ -213,4 +213,4 @@ def _draw_designs(ax: Axes, tolerance: Tolerance) -> None:
         ax.plot(best.location[name], best.value, "D", color=color, markersize=7, label=f"{text}:\n{place}")
     ax.set_xlabel(label(name))
     ax.set_ylabel(label(q))
-    _legend_beside(ax)
+    legend_beside(ax)

@@ -100,7 +100,7 @@ def view(
         warnings.warn(f"no display, so the picture is saved as {picture.resolve()}", UserWarning, stacklevel=2)
     path = None if picture is None else target("picture", picture, PICTURES)
     clip = path is None if clip is None else clip
-    with nullcontext() if has_display() else _no_display_warnings():
+    with nullcontext() if has_display() else no_display_warnings():
         return _drawn(scene, field, path, shown, copies=copies, log=log, clip=clip, arrows=arrows, size=size)
 
 
@@ -109,8 +109,8 @@ def _view_plan(solution: GridSolution, field: str | None, picture: Any, size: tu
         picture = Path("plan.png")
         warnings.warn(f"no display, so the picture is saved as {picture.resolve()}", UserWarning, stacklevel=3)
     path = None if picture is None else target("picture", picture, PICTURES)
-    with nullcontext() if has_display() else _no_display_warnings():
-        plotter = _plotter(path is not None, size)
+    with nullcontext() if has_display() else no_display_warnings():
+        plotter = new_plotter(path is not None, size)
         try:
             view_plan(solution, plotter, field, path, size)
         finally:
@@ -122,7 +122,7 @@ def _drawn(
     scene: Scene, field: str, path: Path | None, shown: Any, *, copies: tuple[int, int], size: tuple[int, int],
     **look: Any,
 ) -> Path | None:  # fmt: skip
-    plotter = _plotter(path is not None, size)
+    plotter = new_plotter(path is not None, size)
     try:
         drawing = Drawing(scene, plotter, field, shown, **look)
         if path is not None:
@@ -156,7 +156,7 @@ def has_display() -> bool:
 
 
 @contextmanager
-def _no_display_warnings() -> Iterator[None]:
+def no_display_warnings() -> Iterator[None]:
     """Keep VTK from printing that there is no X server before it draws without one."""
     from vtkmodules.vtkCommonCore import vtkLogger
 
@@ -168,7 +168,7 @@ def _no_display_warnings() -> Iterator[None]:
         vtkLogger.SetStderrVerbosity(before)
 
 
-def _plotter(off_screen: bool, size: tuple[int, int]) -> Any:
+def new_plotter(off_screen: bool, size: tuple[int, int]) -> Any:
     import pyvista as pv
 
     plotter = pv.Plotter(off_screen=off_screen, notebook=False, window_size=list(size), theme=pv.themes.DocumentTheme())

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..analysis.accuracy import with_bar
+from ..analysis.uncertainty import with_bar
 from ..errors import Complaints
 from ..units import split_name
 

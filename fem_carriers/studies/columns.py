@@ -181,7 +181,7 @@ def with_bars(table: pd.DataFrame, columns: Mapping[str, str]) -> pd.DataFrame:
     """
     import pandas as pd
 
-    from ..analysis.accuracy import with_bar
+    from ..analysis.uncertainty import with_bar
 
     problems = Complaints("with_bars")
     for name in columns:

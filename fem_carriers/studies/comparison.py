@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from ..analysis.accuracy import with_bar
+from ..analysis.uncertainty import with_bar
 from ..units import split_name
 from .identity import plain_form
 from .store import read_store

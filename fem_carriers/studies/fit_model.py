@@ -11,7 +11,7 @@ import numpy as np
 
 from ..analysis.held import HeldBipolar, system_like
 from ..analysis.quantum_efficiency import quantum_efficiency
-from ..analysis.scan import _prepared, _signals
+from ..analysis.scan import prepared_scan, spot_signals
 from ..analysis.spot import BeamSpot
 from ..analysis.tracer import Tracer
 from ..cell.light import Monochromatic, Sunlight
@@ -165,8 +165,8 @@ def scan_at(posed: Problem, x_um: NDArray[np.float64], column: str, how: Mapping
     given = {"wavelength_nm": None, "absorption_per_cm": None, "terminal": None, "reflectance": None, "path": None,
              "enters": None, "voltage_V": 0.0, "form": "excess"} | dict(how)  # fmt: skip
     spot = BeamSpot(given.pop("spot_diameter_um"), given.pop("spot_shape", "gaussian"))
-    _, response, spot = _prepared("scan", posed, spot, **given)
-    signals = _signals(response, spot, x_um[:, None])
+    _, response, spot = prepared_scan("scan", posed, spot, **given)
+    signals = spot_signals(response, spot, x_um[:, None])
     return np.asarray(signals[0 if column.startswith("external") else 1])
 
 

@@ -10,8 +10,8 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..analysis.accuracy import with_bar
 from ..analysis.curve import current_voltage
+from ..analysis.uncertainty import with_bar
 from ..errors import Complaints
 from ..units import split_name
 from .limits import Constraint, Region, check_limits

@@ -119,6 +119,7 @@ class _Any:
     """Stands for a distribution that was refused."""
 
     def quantile(self, share: Any) -> Any:
+        """The share itself."""
         return share
 
 

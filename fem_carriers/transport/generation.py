@@ -113,6 +113,7 @@ def lit_region(source: Source, plane: LitPlane) -> Any:
 
 
 def inside_mask(source: Source, plane: LitPlane, region: Any) -> Any:
+    """The part of a region of the plane that the source's mask lets light through to, as shapely geometry in µm."""
     from shapely import union_all
 
     if not source.mask:

@@ -153,9 +153,11 @@ class _SuperLU:
         self.entries = int(self._lu.nnz)
 
     def solve(self, right: NDArray[np.float64]) -> NDArray[np.float64]:
+        """x with A x = b, both (n,)."""
         return np.asarray(self._lu.solve(right))
 
     def free(self) -> None:
+        """Give the memory of the factors back."""
         self._lu = None
 
 
