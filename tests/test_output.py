@@ -17,7 +17,7 @@ from fem_carriers.output.images import ITSELF, images
 from fem_carriers.output.labels import label
 from fem_carriers.output.scene import Scene, straight_lines
 from fem_carriers.output.style import linear_range, log_by_default, log_range
-from fem_carriers.output.window import Window, _plotter, has_display
+from fem_carriers.output.window import Window, has_display, new_plotter
 
 BASE = fc.Base("p", doping_per_cm3=1e16, thickness_um=160, lifetime_us=100)
 
@@ -211,7 +211,7 @@ class TestScene:
 
 @pytest.fixture
 def window(solid):
-    plotter = _plotter(True, (400, 300))
+    plotter = new_plotter(True, (400, 300))
     drawing = Drawing(Scene(solid), plotter, "excess_density_per_cm3", [ITSELF], log=None, clip=True, arrows=False)
     drawing.draw()
     yield Window(drawing, (1, 1))

@@ -15,7 +15,7 @@ from fem_carriers.output.plan import _around, plot_plan, plot_repeat_unit
 from fem_carriers.output.plan_data import gaps_mm, metal_polygons_mm, plan_map, terminals_mm
 from fem_carriers.output.plan_power import _apart, plot_grid_losses, plot_trade
 from fem_carriers.output.plan_window import PlanWindow
-from fem_carriers.output.window import _plotter
+from fem_carriers.output.window import new_plotter
 from fem_carriers.studies.grid_choice import best_layout
 
 SILICON = diode_current(39.0, 25.0, J02_nA_per_cm2=4.0)
@@ -129,7 +129,7 @@ def test_trade_picture(tmp_path):
 
 def test_window(solution, tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
-    plotter = _plotter(True, (640, 400))
+    plotter = new_plotter(True, (640, 400))
     try:
         window = PlanWindow(solution, plotter, "above_terminal_mV")
         window.draw()

@@ -284,10 +284,12 @@ def slow(cell):
     return {"process": os.getpid()}
 """
 SCRIPT = """
+import signal
 import sys
 import fem_carriers as fc
 from fem_carriers.errors import SweepInterrupted
 from slow_compute import slow
+signal.signal(signal.SIGINT, signal.default_int_handler)  # shells let background jobs ignore it
 print("started", flush=True)
 base = fc.Base("p", doping_per_cm3=1e16, thickness_um=150, lifetime_us=100)
 pitches = [float(p) for p in sys.argv[1:]]
@@ -320,7 +322,7 @@ def test_interrupt_from_the_keyboard_with_processes(script):
     assert process.stdout.readline() == "started\n"
     time.sleep(10)
     os.killpg(process.pid, signal.SIGINT)  # as a terminal does: to all processes of the group
-    out, err = process.communicate(timeout=90)
+    out, err = process.communicate(timeout=40)
     assert out.startswith("2 True"), err
     assert "2 of 4 points are finished" in err
 

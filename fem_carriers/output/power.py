@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..analysis.uncertainty import with_bar
 from ..errors import Complaints
 from .canvas import finish, new_figure
 from .style import DARK, OKABE_ITO
@@ -69,15 +72,21 @@ def _mark_maximum(axes: list[Axes], curve: CurrentVoltage) -> None:
         ax.plot(best.voltage_V, value, "D", color=OKABE_ITO[5], markersize=8)
         ax.axvline(best.voltage_V, color=OKABE_ITO[5], linewidth=0.8, linestyle="--")
         ax.set_ylim(bottom=min(0.0, -0.06 * value), top=1.15 * max(value, 1e-12))
+    bars: Mapping[str, float] = curve.uncertainty or {}
+
+    def shown(name: str, value: float, factor: float = 1.0) -> str:
+        return with_bar(factor * value, factor * bars.get(name, math.inf), 4)
+
     lines = [
-        f"short circuit {curve.jsc_mA_per_cm2:.2f} mA/cm²",
-        f"open circuit {1e3 * curve.voc_V:.1f} mV",
-        f"fill factor {curve.fill_factor_percent:.2f} %",
+        f"short circuit {shown('jsc_mA_per_cm2', curve.jsc_mA_per_cm2)} mA/cm²",
+        f"open circuit {shown('voc_V', curve.voc_V, 1e3)} mV",
+        f"fill factor {shown('fill_factor_percent', curve.fill_factor_percent)} %",
     ]
     axes[0].text(0.03, 0.1, "\n".join(lines), transform=axes[0].transAxes, va="bottom")
-    text = f"maximum power {best.power_mW_per_cm2:.2f} mW/cm²\nat {1e3 * best.voltage_V:.1f} mV"
+    power = shown("maximum_power_mW_per_cm2", best.power_mW_per_cm2)
+    text = f"maximum power {power} mW/cm²\nat {1e3 * best.voltage_V:.1f} mV"
     if curve.incident_power_mW_per_cm2 > 0:
-        text += f"\nefficiency {curve.efficiency_percent:.2f} %"
+        text += f"\nefficiency {shown('efficiency_percent', curve.efficiency_percent)} %"
     axes[1].text(0.03, 0.95, text, transform=axes[1].transAxes, va="top")
 
 
